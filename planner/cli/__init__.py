@@ -1,0 +1,1 @@
+"""The commands: each parses, calls the rooms below, and shows."""

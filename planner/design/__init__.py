@@ -1,0 +1,1 @@
+"""What a night should do: effects, drift, running order."""

@@ -1,0 +1,1 @@
+"""The rig link: the only room that talks to a rig."""

@@ -1,0 +1,1 @@
+"""The logbook: the only room that talks SQL."""

@@ -1,0 +1,1 @@
+"""Running a night: the dispatcher and what surrounds it."""
