@@ -40,7 +40,9 @@ def lock_file(need: str) -> Path:
     exact = ROOT / ".locks" / f"py{sys.version_info[0]}.{sys.version_info[1]}-{need}.txt"
     if exact.exists():
         return exact
-    locks = sorted((ROOT / ".locks").glob(f"py3.*-{need}.txt"), key=lambda path: int(path.name.split(".")[1].split("-")[0]))
+    locks = sorted(
+        (ROOT / ".locks").glob(f"py3.*-{need}.txt"), key=lambda path: int(path.name.split(".")[1].split("-")[0])
+    )
     if not locks:
         stop("the lock files in .locks/ are missing: this is not a whole copy of Nightfringe")
     say(f"no lock file for Python {sys.version_info[0]}.{sys.version_info[1]}; trying {locks[-1].name}")
@@ -49,7 +51,12 @@ def lock_file(need: str) -> Path:
 
 def environment_key() -> str:
     """Names the environment by what it depends on, so that an old one is never taken for a new one."""
-    parts = [lock_file("run").read_bytes(), lock_file("dev").read_bytes(), sys.version.encode(), sys.executable.encode()]
+    parts = [
+        lock_file("run").read_bytes(),
+        lock_file("dev").read_bytes(),
+        sys.version.encode(),
+        sys.executable.encode(),
+    ]
     return hashlib.sha256(b"\0".join(parts)).hexdigest()[:12]
 
 

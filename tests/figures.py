@@ -50,7 +50,16 @@ def checked(row: Row, source: str) -> Row:
 
 
 def failure(name: str) -> Row:
-    return {"name": name, "value": None, "unit": "", "bound": "runs", "reference": None, "ratio": None, "ok": False, "from": name}
+    return {
+        "name": name,
+        "value": None,
+        "unit": "",
+        "bound": "runs",
+        "reference": None,
+        "ratio": None,
+        "ok": False,
+        "from": name,
+    }
 
 
 def measure(name: str) -> list[Row]:

@@ -26,8 +26,7 @@ class LateGroup(click.Group):
         entry = COMMANDS.get(cmd_name)
         if entry is None:
             return None
-        command = import_module(entry[0]).command
-        assert isinstance(command, click.Command)
+        command: click.Command = import_module(entry[0]).command
         return command
 
     def format_commands(self, ctx: click.Context, formatter: click.HelpFormatter) -> None:
