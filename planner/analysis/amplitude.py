@@ -1,0 +1,199 @@
+"""How sure an amplitude is: intervals and tests that stay right down to no amplitude at all.
+
+One fringe gives two quadratures with equal, independent noise, so its squared amplitude over the noise variance is
+noncentral chi-squared with 2 degrees of freedom (its root is Rice distributed); several fringes of one amplitude and
+any phases add to one with 2 degrees of freedom each. `power` below is that sum: sum |q|^2 / (noise variance of one
+quadrature), and `ncp` its noncentrality: sum amplitude^2 / (noise variance).
+
+Where the noise is itself estimated from residuals, the distribution is averaged over what the residuals leave open.
+That average is exact at amplitude zero (it is then the F distribution) and far from zero (Student's t).
+
+References:
+    Rice, Bell Syst. Tech. J. 24, 46 (1945) (from memory); Sankaran, Biometrika 50, 199 (1963) (from memory);
+    Weerahandi, J. Am. Stat. Assoc. 84, 602 (1989), generalised p-values (from memory).
+"""
+
+from functools import lru_cache
+
+import numpy as np
+from scipy import special
+from scipy.interpolate import PchipInterpolator
+
+from planner.arrays import FloatArray
+from planner.errors import InputError
+
+# Above this noncentrality Sankaran's form is within 3e-6 of the exact distribution and does not slow down.
+LARGE_NCP = 2000.0
+# With this many residual degrees of freedom the noise counts as known: its own error changes an interval by < 0.1 %.
+KNOWN_NOISE_DOF = 5000.0
+NODES = 40
+TABLE_TOP = 14.0  # in units of the noise; beyond it one fringe's amplitude is Gaussian to 1e-3 of the noise
+TABLE_SIZE = 420
+BISECTIONS = 46
+
+
+def chi_squared_cdf(power: FloatArray, dof: float, ncp: FloatArray) -> FloatArray:
+    """Noncentral chi-squared distribution function, for any noncentrality.
+
+    Args:
+        power: where to take it; any shape. dof: degrees of freedom. ncp: noncentrality, broadcast against `power`.
+
+    Returns:
+        Probability, shape of the broadcast arguments. Exact below a noncentrality of 2000, within 3e-6 above.
+
+    References:
+        Sankaran, Biometrika 50, 199 (1963), second approximation (from memory; checked here against scipy's ncx2).
+    """
+    power, ncp = np.broadcast_arrays(np.asarray(power, float), np.asarray(ncp, float))
+    large = ncp > LARGE_NCP
+    out = np.empty(power.shape)
+    out[~large] = special.chndtr(power[~large], dof, ncp[~large])
+    if large.any():
+        mean = dof + ncp[large]
+        h = 1 - 2 * mean * (dof + 3 * ncp[large]) / (3 * (dof + 2 * ncp[large]) ** 2)
+        p = (dof + 2 * ncp[large]) / mean**2
+        m = (h - 1) * (1 - 3 * h)
+        shift = 1 + h * p * (h - 1 - 0.5 * (2 - h) * m * p)
+        out[large] = special.ndtr(((power[large] / mean) ** h - shift) / (h * np.sqrt(2 * p) * (1 + 0.5 * m * p)))
+    return out
+
+
+@lru_cache(maxsize=256)
+def noise_nodes(noise_dof: float) -> tuple[FloatArray, FloatArray]:
+    """Nodes and weights that average over (true noise variance / estimated one)^-1 = chi-squared(noise_dof)/noise_dof.
+
+    Args:
+        noise_dof: degrees of freedom of the noise estimate; inf for a known noise.
+
+    Returns:
+        Two arrays of shape (n_node,): the ratio, and weights that add to 1.
+    """
+    if noise_dof <= 0:
+        raise InputError("the noise has no degrees of freedom left: it cannot be estimated from these residuals")
+    if noise_dof >= KNOWN_NOISE_DOF:
+        return np.ones(1), np.ones(1)
+    if noise_dof <= 60:
+        nodes, weights = special.roots_genlaguerre(NODES, noise_dof / 2 - 1)
+        return 2 * nodes / noise_dof, weights / weights.sum()
+    # the cube root of chi-squared is close to Gaussian (Wilson and Hilferty 1931): 1e-6 here
+    z, weights = special.roots_hermitenorm(NODES // 2)
+    spread = 2 / (9 * noise_dof)
+    return np.maximum(1 - spread + z * np.sqrt(spread), 1e-6) ** 3, weights / weights.sum()
+
+
+def power_cdf(power: FloatArray, dof: float, ncp: FloatArray, noise_dof: float = np.inf) -> FloatArray:
+    """Probability of a power no larger than `power`, the estimated noise averaged over.
+
+    Args:
+        power: measured power in units of the estimated noise variance. dof: 2 a fringe. ncp: noncentrality in the same
+        units. noise_dof: of the noise estimate.
+
+    Returns:
+        Probability, shape of the broadcast `power` and `ncp`. At ncp = 0 it is the F distribution of power/dof.
+    """
+    nodes, weights = noise_nodes(noise_dof)
+    power, ncp = np.broadcast_arrays(np.asarray(power, float), np.asarray(ncp, float))
+    values = chi_squared_cdf(power[..., None] * nodes, dof, ncp[..., None] * nodes)
+    return np.asarray(values @ weights)
+
+
+def zero_test(power: FloatArray, dof: float, noise_dof: float = np.inf) -> FloatArray:
+    """p value of "there is no amplitude": exact, chi-squared for a known noise and F for an estimated one.
+
+    Args:
+        power: sum |q|^2 / (estimated noise variance of one quadrature), any shape. dof: 2 a fringe. noise_dof: of the
+        noise estimate.
+
+    Returns:
+        p value, shape of `power`.
+    """
+    power = np.asarray(power, float)
+    if np.isinf(noise_dof):
+        return np.asarray(special.chdtrc(dof, power))
+    return np.asarray(special.fdtrc(dof, noise_dof, power / dof))
+
+
+def _lower_tail(ncp: FloatArray, dof: float, miss: float) -> FloatArray:
+    """How much of the miss probability lies in the lower tail.
+
+    None up to where the amplitude adds one standard deviation of the noise's own power, so that no interval is empty
+    or pretends to know a small amplitude to better than the noise; half of it well above the noise. It never falls as
+    the amplitude grows, so that both ends of the interval grow with the measured power.
+    """
+    excess = np.maximum(ncp / np.sqrt(2 * dof) - 1, 0.0)
+    return np.asarray(miss / 2 * -np.expm1(-excess))
+
+
+def _solve(power: FloatArray, dof: float, noise_dof: float, level: float) -> tuple[FloatArray, FloatArray]:
+    """Both ends of the interval of the root of the noncentrality, by bisection; shape of `power`."""
+    miss = 1 - level
+    # past this the distribution lies far above any acceptable power: Student's t of few degrees is wide
+    reach = 40.0 if noise_dof < 3 else 12.0
+    top = np.sqrt(power) * (1 + (reach if noise_dof < 60 else 1.0)) + reach
+    ends = []
+    for upper in (False, True):
+        low, high = np.zeros(power.shape), top.copy()
+        for _ in range(BISECTIONS):
+            middle = 0.5 * (low + high)
+            tail = _lower_tail(middle**2, dof, miss)
+            target = tail if upper else 1 - miss + tail
+            inside = power_cdf(power, dof, middle**2, noise_dof) > target
+            low, high = np.where(inside, middle, low), np.where(inside, high, middle)
+        ends.append(0.5 * (low + high))
+    lower = np.where(power_cdf(power, dof, np.zeros(power.shape), noise_dof) <= level, 0.0, ends[0])
+    return lower, ends[1]
+
+
+@lru_cache(maxsize=64)
+def _table(dof: float, noise_dof: float, level: float) -> tuple[PchipInterpolator, PchipInterpolator]:
+    roots = np.linspace(0.0, TABLE_TOP, TABLE_SIZE)
+    lower, upper = _solve(roots**2, dof, noise_dof, level)
+    return PchipInterpolator(roots, lower), PchipInterpolator(roots, upper)
+
+
+def amplitude_interval(
+    power: FloatArray, dof: float = 2.0, noise_dof: float = np.inf, level: float = 0.95
+) -> tuple[FloatArray, FloatArray]:
+    """Interval of root noncentrality: of amplitude over its error, for one fringe.
+
+    Never empty, starts at zero where zero fits, and covers `level` for every amplitude, zero included: at amplitude
+    zero the acceptance region is the lowest `level` of the powers, far above it the central one.
+
+    Args:
+        power: sum |q|^2 / (estimated noise variance of one quadrature), shape (n,). dof: 2 a fringe. noise_dof: of
+        the noise estimate. level: coverage.
+
+    Returns:
+        Lower and upper end in units of the estimated noise, each of shape (n,).
+    """
+    power = np.atleast_1d(np.asarray(power, float))
+    if not np.isfinite(power).all() or (power < 0).any():
+        raise InputError("a power is not a finite number at or above zero: the fit before it did not succeed")
+    if len(power) <= TABLE_SIZE or dof != 2:
+        return _solve(power, dof, noise_dof, level)
+    roots = np.sqrt(power)
+    inside = roots < TABLE_TOP
+    lower, upper = np.empty(power.shape), np.empty(power.shape)
+    low_table, high_table = _table(dof, noise_dof, level)
+    lower[inside], upper[inside] = low_table(roots[inside]), high_table(roots[inside])
+    if not inside.all():
+        # far above the noise a root power is the amplitude's root plus half a noise variance, with Gaussian error
+        step = special.ndtri(0.5 + level / 2) if np.isinf(noise_dof) else special.stdtrit(noise_dof, 0.5 + level / 2)
+        far = roots[~inside]
+        lower[~inside] = np.sqrt(np.maximum(np.maximum(far - step, 0.0) ** 2 - (dof - 1), 0.0))
+        upper[~inside] = np.sqrt((far + step) ** 2 - (dof - 1))
+    return lower, upper
+
+
+def debiased(power: FloatArray, dof: float = 2.0) -> tuple[FloatArray, FloatArray]:
+    """Root noncentrality without the upward (Rice) bias, and the unbiased noncentrality.
+
+    Args:
+        power: sum |q|^2 / (estimated noise variance of one quadrature), any shape. dof: 2 a fringe.
+
+    Returns:
+        `root`: sqrt(max(0, power - (dof - 1))), its mean within 0.05 noise units of the truth from 2 noise units up
+        for one fringe; `square`: power - dof, unbiased everywhere, and therefore sometimes negative.
+    """
+    power = np.asarray(power, float)
+    return np.sqrt(np.maximum(power - (dof - 1), 0.0)), power - dof
