@@ -1,25 +1,25 @@
 """Every error that Nightfringe raises on purpose, named for what the person in front of it must do.
 
-    NightfringeError
-    +-- InputError                 what was given is wrong: change it            (exit 2)
-    |   +-- ProblemsFound          a file with problems, all of them listed
-    |   +-- QuantityError          a number or unit that cannot be read
-    |   +-- PlanImpossible         no plan fits; the message names the nearest one that does
-    |   +-- LimitExceeded          beyond the rig file's limits; names shot and limit
-    |   +-- NotEnoughData          the data cannot answer; the message says what is missing
-    +-- LinkError                  between here and the rig                       (exit 3)
-    |   +-- RigUnreachable         nothing was sent: nobody listens there
-    |   +-- RigUnknown             sent, and no clear answer: ask before anything else
-    |   +-- RigNotNow              full or not ready; `retry_after_s`
-    |   +-- RigRefused             understood and refused; `status`, `why`
-    |   +-- RigFenced              a newer dispatcher drives this rig: stop
-    |   +-- RigMalformed           an answer that breaks the link's rules; kept aside, never guessed
-    +-- LogbookError               the database                                   (exit 4)
-        +-- LogbookMissing         no logbook at that place
-        +-- LogbookTooNew          written by a newer Nightfringe; both schema numbers
-        +-- LogbookUnavailable     locked, read-only, full or gone: pause, and try again
-        +-- LogbookConflict        the rows are not as this action needs them
-        +-- LogbookDamaged         a stored hash does not match its bytes
+NightfringeError
++-- InputError                 what was given is wrong: change it            (exit 2)
+|   +-- ProblemsFound          a file with problems, all of them listed
+|   +-- QuantityError          a number or unit that cannot be read
+|   +-- PlanImpossible         no plan fits; the message names the nearest one that does
+|   +-- LimitExceeded          beyond the rig file's limits; names shot and limit
+|   +-- NotEnoughData          the data cannot answer; the message says what is missing
++-- LinkError                  between here and the rig                       (exit 3)
+|   +-- RigUnreachable         nothing was sent: nobody listens there
+|   +-- RigUnknown             sent, and no clear answer: ask before anything else
+|   +-- RigNotNow              full or not ready; `retry_after_s`
+|   +-- RigRefused             understood and refused; `status`, `why`
+|   +-- RigFenced              a newer dispatcher drives this rig: stop
+|   +-- RigMalformed           an answer that breaks the link's rules; kept aside, never guessed
++-- LogbookError               the database                                   (exit 4)
+    +-- LogbookMissing         no logbook at that place
+    +-- LogbookTooNew          written by a newer Nightfringe; both schema numbers
+    +-- LogbookUnavailable     locked, read-only, full or gone: pause, and try again
+    +-- LogbookConflict        the rows are not as this action needs them
+    +-- LogbookDamaged         a stored hash does not match its bytes
 """
 
 from collections.abc import Sequence as _Sequence
@@ -96,11 +96,12 @@ class RigUnknown(LinkError):
 
 
 class RigNotNow(LinkError):
-    """The rig is full or not ready and accepted nothing."""
+    """The rig is full (`full`) or not ready and accepted nothing; try again after `retry_after_s`."""
 
-    def __init__(self, message: str, *, retry_after_s: float) -> None:
+    def __init__(self, message: str, *, retry_after_s: float, full: bool = False) -> None:
         super().__init__(message)
         self.retry_after_s = retry_after_s
+        self.full = full
 
 
 class RigRefused(LinkError):

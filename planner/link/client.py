@@ -211,7 +211,7 @@ class RigClient:
             why = shorten(raw.decode("utf-8", "replace")) or answer.reason_phrase
         said = f"the rig at {self.address} answered {status}: {why}"
         if status in (429, 503):
-            return RigNotNow(said, retry_after_s=_retry_after(answer))
+            return RigNotNow(said, retry_after_s=_retry_after(answer), full=status == 429)
         if status == 403:
             return RigFenced(said)
         if status == 408 or status >= 500:  # 408: the rig gave up reading; whether it had enough, only it knows

@@ -25,7 +25,6 @@ from pydantic import (
 
 from planner.link.wire import canonical
 
-LINK_VERSION = 1
 LONGEST_SHOT_S = 86400.0
 KEY_PATTERN = r"^[A-Za-z0-9_-]{8,64}$"
 KEY = re.compile(KEY_PATTERN)
