@@ -72,6 +72,15 @@ class Stage:
     ramps: tuple[Ramp, ...] = ()
     pulses: tuple[Pulse, ...] = ()
 
+    def expressions(self) -> list[Expression]:
+        """All arithmetic of the stage."""
+        found = [self.lasts, *self.levels.values()]
+        for ramp in self.ramps:
+            found += [ramp.start, ramp.end]
+        for pulse in self.pulses:
+            found += [pulse.at, pulse.lasts, pulse.level]
+        return found
+
 
 @dataclass(frozen=True, kw_only=True)
 class Sweep:
@@ -181,6 +190,7 @@ class GoalSpec:
     wanted: tuple[str, ...] = ()  # switches whose product carries the signal
     target: float | None = None
     hours: float | None = None
+    target_unit: str = ""  # as written: says whether the target is relative ("%", "") or absolute ("s", "um/s^2")
     details: Mapping[str, float] = field(default_factory=dict)  # goal-specific numbers (period_s, depth, risk, ...)
 
 
@@ -215,6 +225,10 @@ class Sequence:
     cuts: tuple[Cut, ...] = ()
     watch: tuple[WatchRule, ...] = ()
     knobs: tuple[Knob, ...] = ()
+    rig: str = ""  # the rig file as written: relative to the sequence file
+    tick_tolerance_rad: float = 0.01  # largest interferometer phase that rounding to whole ticks may cost
+    places: Mapping[str, tuple[int, int]] = field(default_factory=dict, repr=False, compare=False)
+    # ^ dotted path -> line and column, for problems that only compiling finds
 
 
 @dataclass(frozen=True, kw_only=True)

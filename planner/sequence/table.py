@@ -19,7 +19,7 @@ class ShotTable:
     hold_s: FloatArray
     phase_rad: FloatArray  # readout phase, in [0, 2 pi)
     duration_s: FloatArray  # whole cycle: stages and dead time, without settling
-    cell: IntArray  # which point of the crossed sweeps and slow switches: shots of one cell differ in phase and fast switches
+    cell: IntArray  # point of the crossed sweeps and slow switches; its shots differ in phase and fast switches
     packet: IntArray  # which fringe packet (numbered along the table)
     repeat: IntArray  # which repeat of its cell
     timeline: IntArray  # row of the timeline set that it plays
