@@ -192,7 +192,7 @@ def shot_variance(
     """
     p = np.broadcast_to(np.asarray(expected, float), (len(data),))
     detector = detection_noise_atoms**2 * (1 - 2 * p + 2 * p**2) / data.atoms**2
-    return projection_variance(p, data.atoms) + detector
+    return np.asarray(projection_variance(p, data.atoms) + detector)
 
 
 def distinct_holds(hold_s: FloatArray) -> tuple[FloatArray, IntArray]:

@@ -39,7 +39,7 @@ class Fringes:
     @property
     def dof(self) -> IntArray:
         """Residual degrees of freedom, (n,); 0 for what could not be solved."""
-        return np.where(self.solved, self.shots - 3, 0)
+        return np.asarray(np.where(self.solved, self.shots - 3, 0), dtype=np.int64)
 
     @property
     def amplitude_squared(self) -> FloatArray:
@@ -60,6 +60,11 @@ class Fringes:
     def phase_rad(self) -> FloatArray:
         """phi in (-pi, pi], (n,)."""
         return np.arctan2(-self.sine, self.cosine)
+
+
+def group_sums(group: IntArray, values: FloatArray, count: int) -> FloatArray:
+    """Sum of `values` (n,) over each group, (count,)."""
+    return np.asarray(np.bincount(group, weights=values, minlength=count), dtype=np.float64)
 
 
 def fit_fringes(theta: FloatArray, y: FloatArray, variance: FloatArray, group: IntArray, count: int) -> Fringes:
@@ -86,7 +91,7 @@ def fit_fringes(theta: FloatArray, y: FloatArray, variance: FloatArray, group: I
     c, s = np.cos(theta), np.sin(theta)
 
     def total(values: FloatArray) -> FloatArray:
-        return np.bincount(group, weights=values, minlength=count)
+        return group_sums(group, values, count)
 
     wc, ws = weight * c, weight * s
     n00, n01, n02 = total(weight), total(wc), total(ws)

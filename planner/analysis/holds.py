@@ -1,0 +1,136 @@
+"""Contrast of each hold from its packets, whatever the phase did from packet to packet.
+
+Tide, laser phase and slow drift move the fringe between packets; averaging quadratures over a night would take that for
+lost contrast. So a hold's contrast comes from the squared amplitudes of its packets: sum |q|^2 minus what noise alone
+puts there, the noise taken from the same packets' residuals. That difference is unbiased even when shots scatter
+unequally, because both parts see the same scatter.
+"""
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from planner.analysis.amplitude import amplitude_interval, debiased, zero_test
+from planner.analysis.fringe import Fringes, group_sums
+from planner.arrays import FloatArray, IntArray
+from planner.errors import NotEnoughData
+
+# Fewer residual degrees of freedom than this say too little about one hold's noise: the night's is taken instead.
+LEAST_NOISE_DOF = 3
+
+
+@dataclass(frozen=True, kw_only=True)
+class HoldContrast:
+    """Contrast per hold. Arrays of shape (n_hold,)."""
+
+    hold_s: FloatArray
+    fringes: IntArray  # packets (or packet parts) with a fringe of their own
+    power: FloatArray  # sum |q|^2 / (noise variance of a quadrature)
+    noise: FloatArray  # variance of a shot over its projection noise, as taken for this hold
+    noise_dof: FloatArray  # inf where the noise was assumed
+    weight: FloatArray  # sum of 1 / (quadrature variance at noise 1): ncp = (C/2)^2 weight / noise
+    squared: FloatArray  # unbiased estimate of C^2
+    squared_scatter: FloatArray  # its variance from the scatter between packets; NaN with one packet
+    value: FloatArray  # C without the upward bias
+    plain: FloatArray  # root mean square of the packets' plain contrasts: biased upwards
+    low: FloatArray
+    high: FloatArray
+    p_zero: FloatArray
+
+    def __len__(self) -> int:
+        return len(self.hold_s)
+
+    def expected_squared_variance(self, squared: FloatArray) -> FloatArray:
+        """Variance of `squared` for white noise if the true squared contrast were this, (n_hold,)."""
+        dof = 2.0 * self.fringes
+        ncp = np.maximum(squared, 0) / 4 * self.weight / self.noise
+        white = 2 * dof + 4 * ncp + 2 * dof**2 / self.noise_dof
+        return np.asarray((4 * self.noise / self.weight) ** 2 * white)
+
+
+def combine(fringes: Fringes, which: IntArray, hold_s: FloatArray, *, level: float = 0.95) -> HoldContrast:
+    """Contrast of each hold from its fringes.
+
+    Args:
+        fringes: n fringes, fitted with projection noise as the variance. which: hold of each, (n,). hold_s: (n_hold,).
+        level: coverage of the intervals.
+
+    Returns:
+        HoldContrast for the holds that have at least one solved fringe.
+
+    Raises:
+        NotEnoughData: no fringe at all.
+    """
+    use = fringes.solved
+    if not use.any():
+        raise NotEnoughData(
+            "no packet has three different readout phases with a usable result: there is no fringe to fit"
+        )
+    size = len(hold_s)
+    label = which[use]
+    count = np.bincount(label, minlength=size)
+    inverse = 1 / fringes.quadrature_variance[use]
+    raw = group_sums(label, fringes.amplitude_squared[use] * inverse, size)
+    weight = group_sums(label, inverse, size)
+    residual = group_sums(label, fringes.chi_squared[use], size)
+    dof = group_sums(label, fringes.dof[use].astype(np.float64), size)
+    night = residual.sum() / dof.sum() if dof.sum() else 1.0
+    night_dof = dof.sum() if dof.sum() else np.inf
+    own = dof >= LEAST_NOISE_DOF
+    noise = np.where(own, residual / np.maximum(dof, 1), night)
+    # counts of atoms are whole numbers and never exactly noiseless; this keeps a made-up perfect fringe finite
+    noise = np.maximum(noise, 1e-12)
+    noise_dof = np.where(own, dof, night_dof)
+    there = count > 0
+    kept = np.flatnonzero(there)
+    power = raw[kept] / noise[kept]
+    low, high = np.empty(len(kept)), np.empty(len(kept))
+    root, square, p_zero = np.empty(len(kept)), np.empty(len(kept)), np.empty(len(kept))
+    for i, h in enumerate(kept):
+        freedom = 2.0 * count[h]
+        (low[i],), (high[i],) = amplitude_interval(power[i : i + 1], freedom, noise_dof[h], level)
+        root[i], square[i] = debiased(power[i], freedom)
+        p_zero[i] = zero_test(power[i], freedom, noise_dof[h])
+    unit = noise[kept] / weight[kept]
+    scatter = _scatter(fringes, label, noise, dof, raw, weight, count)
+    return HoldContrast(
+        hold_s=hold_s[kept],
+        fringes=count[kept],
+        power=power,
+        noise=noise[kept],
+        noise_dof=noise_dof[kept],
+        weight=weight[kept],
+        squared=4 * unit * square,
+        squared_scatter=scatter[kept],
+        value=2 * np.sqrt(unit) * root,
+        plain=2 * np.sqrt(unit * power),
+        low=2 * np.sqrt(unit) * low,
+        high=2 * np.sqrt(unit) * high,
+        p_zero=p_zero,
+    )
+
+
+def _scatter(
+    fringes: Fringes,
+    label: IntArray,
+    noise: FloatArray,
+    dof: FloatArray,
+    raw: FloatArray,
+    weight: FloatArray,
+    count: IntArray,
+) -> FloatArray:
+    """Variance of each hold's squared contrast from the scatter of its packets' own estimates, (n_hold,).
+
+    A packet contributes |q|^2 / w minus its share of the noise measured from its own residual; what is expected of it
+    at the hold's mean contrast is taken off before squaring, since packets of unequal weight contribute unequally.
+    """
+    use = fringes.solved
+    inverse = 1 / fringes.quadrature_variance[use]
+    share = 2 * count / np.maximum(dof, 1)
+    given = fringes.amplitude_squared[use] * inverse - share[label] * fringes.chi_squared[use]
+    mean_square = (raw - 2 * count * noise) / np.maximum(weight, 1e-300)
+    expected = mean_square[label] * inverse + noise[label] * (2 - share[label] * fringes.dof[use])
+    with np.errstate(divide="ignore", invalid="ignore"):
+        correction = np.where(count > 1, count / (count - 1.0), np.nan)
+        total = group_sums(label, (given - expected) ** 2, len(count))
+        return np.asarray(16 * correction * total / weight**2)
