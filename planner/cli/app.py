@@ -13,7 +13,12 @@ from planner import __version__
 from planner.errors import NightfringeError, ProblemsFound
 
 # command name -> (module, one-line summary); the module's `command` is the click command
-COMMANDS: dict[str, tuple[str, str]] = {}
+COMMANDS: dict[str, tuple[str, str]] = {
+    "init": ("planner.cli.init", "Write a commented starter sequence and rig file"),
+    "check": ("planner.cli.check", "Find every problem of a sequence or rig file"),
+    "compile": ("planner.cli.compile", "Compile a sequence to its shots and timelines"),
+    "timeline": ("planner.cli.timeline", "Draw the timeline of one shot"),
+}
 
 
 class LateGroup(click.Group):

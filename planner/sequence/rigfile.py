@@ -217,3 +217,8 @@ def _zone(node: Node) -> str:
         node.problem(f"there is no time zone {show(value)}", 'names look like "Europe/Berlin" or "UTC"')
         return "UTC"
     return value
+
+
+def is_rig_text(text: str) -> bool:
+    """Whether a file presents itself as a rig file: its version stamp stands at the start of a line."""
+    return re.search(r"^\s*nightfringe_rig\s*=", text, flags=re.MULTILINE) is not None
