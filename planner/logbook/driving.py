@@ -21,6 +21,9 @@ from planner.logbook.states import ENDS, INTENDED, WITHDRAWN, may_become
 from planner.logbook.tables import OPEN_ATTEMPTS, Anchor, Attempt, Lease, Night, Quarantine, Result, Revision, Rig
 
 
+LATEST = 16  # attempts looked at for the rig's ordinal: more than a rig holds at once
+
+
 @dataclass(frozen=True, kw_only=True)
 class NewAttempt:
     """An attempt to be committed before it is sent."""
@@ -31,6 +34,7 @@ class NewAttempt:
     position: int
     digest: str
     boot: str
+    settle_s: float
     start_by_us: int | None
 
 
@@ -94,6 +98,7 @@ class Step:
             "epoch": self._driving.epoch,
             "digest": new.digest,
             "boot": new.boot,
+            "settle_s": new.settle_s,
             "start_by_us": new.start_by_us,
             "intended_us": self._now_us,
         }
@@ -282,6 +287,27 @@ class Driving:
                 .order_by(Attempt.position, Attempt.try_number)
             )
             return [(position, state) for position, state in rows]
+
+    def first_start_us(self, night_id: int, position: int) -> int | None:
+        """When the first shot from `position` on started, on the rig's clock; None where none has."""
+        with self._book.reading() as connection:
+            return connection.scalar(
+                select(func.min(Result.started_us))
+                .join(Attempt, Attempt.id == Result.attempt_id)
+                .where(Attempt.night_id == night_id, Attempt.position >= position)
+            )
+
+    def last_ordinal(self, night_id: int) -> int:
+        """The highest ordinal on record for the night's latest attempts; 0 where there is none."""
+        latest = (
+            select(Attempt.ordinal)
+            .where(Attempt.night_id == night_id, Attempt.state.in_(ENDS))
+            .order_by(Attempt.position.desc())
+            .limit(LATEST)
+            .subquery()
+        )
+        with self._book.reading() as connection:
+            return connection.scalar(select(func.coalesce(func.max(latest.c.ordinal), 0))) or 0
 
     def document(self, name: str) -> bytes:
         """A document by its hash."""

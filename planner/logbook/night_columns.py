@@ -30,6 +30,7 @@ _RECORD = select(
     Attempt.position,
     Attempt.state,
     Attempt.boot,
+    Attempt.settle_s,
     Result.atoms_a,
     Result.atoms_b,
     Result.background,
@@ -71,6 +72,7 @@ def read_columns(connection: Connection, night_id: int) -> Columns:
         position,
         state,
         boot,
+        settle_s,
         atoms_a,
         atoms_b,
         background,
@@ -81,7 +83,7 @@ def read_columns(connection: Connection, night_id: int) -> Columns:
         finished_uptime_s,
         readings,
         flags,
-    ) = zip(*rows, strict=True) if rows else [()] * 16
+    ) = zip(*rows, strict=True) if rows else [()] * 17
     requests = read_requests(connection, night_id)
     numbers = {request.id: request.number for request in requests}
     columns: Columns = {
@@ -96,10 +98,10 @@ def read_columns(connection: Connection, night_id: int) -> Columns:
         "saturated": _floats(saturated),
     }
     planned = _planned(connection, night_id, np.array(revision, dtype=np.int64), columns["position"])
-    columns |= {name: planned[name] for name in ("shot", "kind", "packet", "unit")}
+    columns |= planned
     columns |= _from_tables(requests, columns["request"], columns["shot"])
     axis = _Axis(connection, night_id, begins_us[0] or 0)
-    begun = axis.seconds(boot, started_uptime_s, started_us) + planned["settle_s"]
+    begun = axis.seconds(boot, started_uptime_s, started_us) + _floats(settle_s)
     ended = axis.seconds(boot, finished_uptime_s, finished_us)
     columns |= {"start_s": begun, "duration_s": ended - begun, "mid_s": (begun + ended) / 2}
     columns |= _reading_columns(_parsed(readings, "{}"))
@@ -137,8 +139,8 @@ class _Axis:
 
 def _planned(connection: Connection, night_id: int, revision: IntArray, position: IntArray) -> Columns:
     """What the order says at each attempt: an attempt names the revision that its position comes from."""
-    names = ("shot", "kind", "packet", "unit", "settle_s")
-    found: Columns = {name: np.zeros(len(position), dtype=float if name == "settle_s" else np.int64) for name in names}
+    names = ("shot", "kind", "packet", "unit")
+    found: Columns = {name: np.zeros(len(position), dtype=np.int64) for name in names}
     rows = connection.execute(
         select(Revision.number, Revision.from_position, Revision.shot_order).where(Revision.night_id == night_id)
     ).all()

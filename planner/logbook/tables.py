@@ -187,6 +187,7 @@ class Attempt(Base):
     digest: Mapped[str]
     boot: Mapped[str | None]  # of the rig, when it was sent
     ordinal: Mapped[int | None]  # the rig's own count
+    settle_s: Mapped[float]  # as sent: longer than the order's where the rig's switches may stand anywhere
     intended_us: Mapped[int]  # this computer's clock
     start_by_us: Mapped[int | None]  # the rig's clock
     ended_us: Mapped[int | None]  # this computer's clock
@@ -195,7 +196,7 @@ class Attempt(Base):
         UniqueConstraint("night_id", "position", "try_number"),
         CheckConstraint(f"state IN ({listed(ATTEMPT_STATES)})", name="state"),
         CheckConstraint(f"(state IN ({listed(ENDS)})) = (ended_us IS NOT NULL)", name="ended"),
-        CheckConstraint("position >= 0 AND try_number >= 1 AND revision >= 1", name="numbers"),
+        CheckConstraint("position >= 0 AND try_number >= 1 AND revision >= 1 AND settle_s >= 0", name="numbers"),
         Index(
             "ix_attempts_open",
             "night_id",
