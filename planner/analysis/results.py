@@ -30,6 +30,18 @@ class Noise:
 
 
 @dataclass(frozen=True, kw_only=True)
+class FringeShots:
+    """Shots laid on their own packet's fringe, for pictures. Arrays of shape (n_shot,).
+
+    Since each packet is turned by its own fitted phase, noise alone looks like a small fringe here.
+    """
+
+    hold_s: FloatArray
+    phase_rad: FloatArray  # phi of the packet + theta of the shot
+    fraction: FloatArray  # y - B of the packet + 1/2
+
+
+@dataclass(frozen=True, kw_only=True)
 class CurveResults:
     """One curve against hold: all shots of one request that share every other swept setting.
 
@@ -42,14 +54,16 @@ class CurveResults:
     packets: int
     contrast: HoldContrast | None
     atoms: HoldAtoms | None
-    pooled_contrast: FloatArray  # (n_hold,) of `contrast`, from quadratures averaged over the night; NaN where unsolved
+    hold_s: FloatArray  # (n_hold,) all holds that were measured
     hold_shots: IntArray  # (n_hold,)
+    pooled_contrast: FloatArray  # (n_hold,) from quadratures averaged over the night, biased upwards; NaN if unsolved
     coherence: Decay | None
     why_no_coherence: str
     lifetime: Decay | None
     why_no_lifetime: str
     noise: Noise | None
     bad_packets: int  # residual far beyond the night's noise; kept
+    fringe_shots: FringeShots
     unsolved: int  # packets with fewer than three readout phases left
 
 
@@ -91,7 +105,7 @@ def fringe_groups(data: NightData) -> tuple[IntArray, int]:
 
 
 def curve_labels(data: NightData, which_hold: IntArray) -> tuple[IntArray, list[dict[str, float]]]:
-    """Which curve against hold each shot belongs to.
+    """Which curve against hold each shot of one request belongs to.
 
     Settings that follow the hold or the readout phase belong to the curve; every other setting that moves makes curves.
 
@@ -104,7 +118,7 @@ def curve_labels(data: NightData, which_hold: IntArray) -> tuple[IntArray, list[
         moving = np.isfinite(column).all() and np.ptp(column) > 1e-9 * np.abs(column).max()
         if moving and not _follows(column, which_hold) and not _is_readout(column, data.phase_rad):
             names.append(name)
-    keys = np.stack([data.request.astype(float), *(data.settings[name] for name in names)])
+    keys = np.stack([np.zeros(len(data)), *(data.settings[name] for name in names)])
     values, label = np.unique(keys, axis=1, return_inverse=True)
     return label.ravel().astype(np.int64), [dict(zip(names, column[1:].tolist(), strict=True)) for column in values.T]
 
@@ -154,25 +168,22 @@ def _curve(data: NightData, request: int, settings: dict[str, float], detection:
     flat = fit_fringes(data.phase_rad, y, shot_variance(data, detection_noise_atoms=detection), group, count)
     contrast, coherence, why_no_coherence = None, None, ""
     pooled = np.full(len(holds), np.nan)
-    shots = np.bincount(which, minlength=len(holds))
     try:
         contrast = combine(flat, hold_of, holds, level=level)
-        kept = np.isin(holds, contrast.hold_s)
         cells = fit_fringes(data.phase_rad, y, shot_variance(data, detection_noise_atoms=detection), which, len(holds))
-        pooled, shots = cells.contrast_plain[kept], shots[kept]
+        pooled = cells.contrast_plain
         coherence = fit_contrast_decay(contrast, level=level)
     except NotEnoughData as error:
         why_no_coherence = str(error)
-    noise, bad = None, 0
-    if flat.solved.any():
-        solved = flat.solved[group]
-        # projection noise depends on where on the fringe a shot lies, and that is known only after a first fit
-        fitted = flat.offset + 0.0
-        expected = (
-            fitted[group] + flat.cosine[group] * np.cos(data.phase_rad) + flat.sine[group] * np.sin(data.phase_rad)
-        )
-        variance = shot_variance(data, expected=np.where(solved, expected, 0.5), detection_noise_atoms=0.0)
-        noise, bad = measure_noise(fit_fringes(data.phase_rad, y, variance, group, count))
+    # projection noise depends on where on the fringe a shot lies, and that is known only after a first fit
+    turn = flat.phase_rad[group] + data.phase_rad
+    expected = flat.offset[group] + flat.contrast_plain[group] / 2 * np.cos(turn)
+    solved = flat.solved[group]
+    variance = shot_variance(data, expected=np.where(solved, expected, 0.5))
+    noise, bad = measure_noise(fit_fringes(data.phase_rad, y, variance, group, count))
+    drawn = FringeShots(
+        hold_s=holds[which][solved], phase_rad=turn[solved], fraction=(y - flat.offset[group] + 0.5)[solved]
+    )
     atoms, lifetime, why_no_lifetime = None, None, ""
     try:
         packet = np.unique(np.stack([which, group]), axis=1, return_inverse=True)[1].ravel()
@@ -187,14 +198,16 @@ def _curve(data: NightData, request: int, settings: dict[str, float], detection:
         packets=count,
         contrast=contrast,
         atoms=atoms,
+        hold_s=holds,
+        hold_shots=np.bincount(which, minlength=len(holds)),
         pooled_contrast=pooled,
-        hold_shots=shots,
         coherence=coherence,
         why_no_coherence=why_no_coherence,
         lifetime=lifetime,
         why_no_lifetime=why_no_lifetime,
         noise=noise,
         bad_packets=bad,
+        fringe_shots=drawn,
         unsolved=int((~flat.solved).sum()),
     )
 
@@ -223,13 +236,12 @@ def summarise(
     if not len(used):
         reasons = "; ".join(f"{reason}: {count}" for reason, count in chosen.left_out.items())
         raise NotEnoughData(f"none of {len(data)} attempts carries a result that counts ({reasons or 'none was made'})")
-    _, which = distinct_holds(used.hold_s)
-    label, settings = curve_labels(used, which)
     curves = []
-    for number, values in enumerate(settings):
-        rows = label == number
-        part = used.rows(rows)
-        curves.append(_curve(part, int(part.request[0]), values, detection_noise_atoms, level))
+    for request in np.unique(used.request).tolist():
+        mine = used.rows(used.request == request)
+        label, settings = curve_labels(mine, distinct_holds(mine.hold_s)[1])
+        for number, values in enumerate(settings):
+            curves.append(_curve(mine.rows(label == number), request, values, detection_noise_atoms, level))
     return NightResults(
         attempts=chosen.total,
         used=len(used),
@@ -285,8 +297,8 @@ def plain_words(curve: CurveResults) -> list[str]:
         )
     elif curve.bad_packets:
         words.append(
-            f"{curve.bad_packets} fringe{'s' if curve.bad_packets > 1 else ''} scatter far beyond the rest; they were "
-            f"kept. Without rare bad shots the noise would be {curve.noise.typical:.2f} x shot noise."
+            f"{curve.bad_packets} fringe(s) scatter far beyond the rest and were kept. "
+            f"Without rare bad shots the noise would be {curve.noise.typical:.2f} x shot noise."
         )
     if curve.unsolved:
         words.append(
