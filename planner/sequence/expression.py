@@ -31,11 +31,16 @@ Step = tuple[str, float | str | int]
 
 
 class ExpressionError(QuantityError):
-    """Arithmetic that cannot be read; `offset` is the character in the text (from 0) where reading stopped."""
+    """Arithmetic that cannot be read.
 
-    def __init__(self, message: str, offset: int) -> None:
+    `offset` is the character in the text (from 0) where reading stopped; `name` the setting that is not there, if
+    that is what is wrong.
+    """
+
+    def __init__(self, message: str, offset: int, name: str = "") -> None:
         super().__init__(message)
         self.offset = offset
+        self.name = name
 
 
 @dataclass(frozen=True)
@@ -222,7 +227,7 @@ class _Parser:
         if token.text not in self.names:
             close = nearest(token.text, self.names)
             hint = f'; did you mean "{close}"?' if close else ""
-            raise ExpressionError(f'there is no setting "{token.text}"{hint}', token.offset)
+            raise ExpressionError(f'there is no setting "{token.text}"{hint}', token.offset, token.text)
         self.used[token.text] = None
         self.steps.append(("name", token.text))
         return self.names[token.text]

@@ -57,12 +57,16 @@ class Document:
     positions: Positions
     schema: dict[str, dict[str, Key]]
     problems: list[Problem] = field(default_factory=list)
+    # settings that are there but could not be read: whatever names them is not a second mistake
+    unreadable: set[str] = field(default_factory=set)
 
-    def problem(self, path: Path, message: str, hint: str = "", *, key: bool = False, offset: int = 0) -> None:
+    def problem(
+        self, path: Path, message: str, hint: str = "", *, key: bool = False, offset: int | None = None
+    ) -> None:
         """Note a problem at a value (or at its key); `offset` characters into a quoted value."""
         line, column = self.positions.place(path, key=key)
         start = self.positions.values.get(path)
-        if offset and start is not None and not self.text.startswith(('"""', "'''"), start):
+        if offset is not None and start is not None and not self.text.startswith(('"""', "'''"), start):
             column += offset + 1  # the quotation mark
         self.problems.append(
             Problem(file=self.file, line=line, column=column, where=where(path), message=message, hint=hint)
@@ -169,7 +173,7 @@ class Node:
     path: Path
     value: Any
 
-    def problem(self, message: str, hint: str = "", *, offset: int = 0) -> None:
+    def problem(self, message: str, hint: str = "", *, offset: int | None = None) -> None:
         """Note a problem at this value."""
         self.document.problem(self.path, message, hint, offset=offset)
 
@@ -253,6 +257,8 @@ class Node:
 
     def choice(self, allowed: Sequence[str], what: str) -> str | None:
         value = self.text()
+        if value in self.document.unreadable:
+            return None
         if value is None or value in allowed:
             return value
         close = nearest(value, allowed)
@@ -263,6 +269,8 @@ class Node:
     def unknown(self, allowed: Iterable[str], what: str) -> None:
         """Note that this value's own key names nothing that there is."""
         name = str(self.path[-1])
+        if name in self.document.unreadable:
+            return
         names = list(allowed)
         close = nearest(name, names)
         hint = f'did you mean "{close}"?' if close else f"there is {_listed(names) or 'none'}"

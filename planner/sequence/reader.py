@@ -134,6 +134,8 @@ def _settings(node: Node | None) -> dict[str, Setting]:
         setting = _setting(name, child)
         if setting is not None:
             found[name] = setting
+        else:
+            node.document.unreadable.add(name)
     return found
 
 

@@ -107,6 +107,8 @@ def read_expression(node: Node, dimensions: Mapping[str, Dimension], wanted: Dim
     try:
         expression = parse_expression(node.value, dimensions)
     except ExpressionError as wrong:
+        if wrong.name in node.document.unreadable:
+            return None
         node.problem(str(wrong), offset=wrong.offset)
         return None
     if wanted is not None and expression.dimension != wanted:

@@ -7,7 +7,7 @@ from planner.quantities import unit
 from planner.sequence.model import Setting, Sweep
 from planner.sequence.nodes import Fields, Node, show
 
-MOST_VALUES = 1_000_000
+MOST_VALUES = 200_000  # in all sweeps of a file together; crossed sweeps of a few hundred values make millions of shots
 MOST_SWEEPS = 12
 MOST_PHASES = 360
 TURN = 2.0 * pi
@@ -41,6 +41,9 @@ def read_sweeps(node: Node | None, settings: dict[str, Setting], roles: dict[str
             leaders[name] = leader
         if values is not None:
             columns[name] = values
+        if sum(map(len, columns.values())) > MOST_VALUES:  # stop before more is built
+            child.problem(f"the sweeps have more than {MOST_VALUES:,} values together")
+            return ()
     return _joined(columns, leaders, named)
 
 
