@@ -18,6 +18,7 @@ from functools import lru_cache
 import numpy as np
 from scipy import special
 from scipy.interpolate import PchipInterpolator
+from scipy.optimize.elementwise import find_root
 
 from planner.arrays import FloatArray
 from planner.errors import InputError
@@ -29,7 +30,7 @@ KNOWN_NOISE_DOF = 5000.0
 NODES = 40
 TABLE_TOP = 14.0  # in units of the noise; beyond it one fringe's amplitude is Gaussian to 1e-3 of the noise
 TABLE_SIZE = 420
-BISECTIONS = 46
+TOLERANCES = {"xatol": 1e-9, "xrtol": 1e-9, "fatol": 0.0, "frtol": 0.0}
 
 
 def chi_squared_cdf(power: FloatArray, dof: float, ncp: FloatArray) -> FloatArray:
@@ -125,23 +126,27 @@ def _lower_tail(ncp: FloatArray, dof: float, miss: float) -> FloatArray:
 
 
 def _solve(power: FloatArray, dof: float, noise_dof: float, level: float) -> tuple[FloatArray, FloatArray]:
-    """Both ends of the interval of the root of the noncentrality, by bisection; shape of `power`."""
+    """Both ends of the interval of the root of the noncentrality, by root finding; shape of `power`."""
     miss = 1 - level
-    # past this the distribution lies far above any acceptable power: Student's t of few degrees is wide
-    reach = 40.0 if noise_dof < 3 else 12.0
-    top = np.sqrt(power) * (1 + (reach if noise_dof < 60 else 1.0)) + reach
-    ends = []
-    for upper in (False, True):
-        low, high = np.zeros(power.shape), top.copy()
-        for _ in range(BISECTIONS):
-            middle = 0.5 * (low + high)
-            tail = _lower_tail(middle**2, dof, miss)
-            target = tail if upper else 1 - miss + tail
-            inside = power_cdf(power, dof, middle**2, noise_dof) > target
-            low, high = np.where(inside, middle, low), np.where(inside, high, middle)
-        ends.append(0.5 * (low + high))
-    lower = np.where(power_cdf(power, dof, np.zeros(power.shape), noise_dof) <= level, 0.0, ends[0])
-    return lower, ends[1]
+    power = np.maximum(power, 1e-9)  # no measured power is zero, and at zero the root below is not a crossing
+
+    def lower_excess(root: FloatArray, power: FloatArray) -> FloatArray:
+        return power_cdf(power, dof, root**2, noise_dof) - (level + _lower_tail(root**2, dof, miss))
+
+    def upper_excess(root: FloatArray, power: FloatArray) -> FloatArray:
+        return power_cdf(power, dof, root**2, noise_dof) - _lower_tail(root**2, dof, miss)
+
+    # how much larger than its estimate the noise may be, and six of its standard deviations above the measured root
+    slack = 1.0 if np.isinf(noise_dof) else float(noise_dof / special.chdtri(noise_dof, 1 - miss / 4)) ** 0.5
+    top = np.sqrt(power) + 6 * slack + dof**0.5
+    begin = np.full(power.shape, (2 * dof) ** 0.25)  # up to here nothing lies in the lower tail
+    upper = find_root(upper_excess, (begin, top), args=(power,), tolerances=TOLERANCES).x
+    lower = np.zeros(power.shape)
+    above = power_cdf(power, dof, np.zeros(power.shape), noise_dof) > level
+    if above.any():
+        start = np.zeros(int(above.sum()))
+        lower[above] = find_root(lower_excess, (start, top[above]), args=(power[above],), tolerances=TOLERANCES).x
+    return lower, upper
 
 
 @lru_cache(maxsize=64)

@@ -86,7 +86,9 @@ class _ContrastLikelihood:
 
     def per_hold(self, squared_contrast: FloatArray) -> FloatArray:
         ncp = (squared_contrast / 4 * self.holds.weight / self.holds.noise)[:, None] * self.nodes
-        return np.asarray(special.logsumexp(self.log_weights + power_log_density(self.power, self.dof, ncp), axis=1))
+        each = self.log_weights + power_log_density(self.power, self.dof, ncp)
+        largest = each.max(axis=1)
+        return np.asarray(largest + np.log(np.exp(each - largest[:, None]).sum(axis=1)))
 
     def __call__(self, parameters: FloatArray) -> float:
         log_squared = np.clip(2 * (parameters[0] - parameters[1] * self.holds.hold_s), -80, 20)

@@ -86,11 +86,12 @@ def combine(fringes: Fringes, which: IntArray, hold_s: FloatArray, *, level: flo
     power = raw[kept] / noise[kept]
     low, high = np.empty(len(kept)), np.empty(len(kept))
     root, square, p_zero = np.empty(len(kept)), np.empty(len(kept)), np.empty(len(kept))
-    for i, h in enumerate(kept):
-        freedom = 2.0 * count[h]
-        (low[i],), (high[i],) = amplitude_interval(power[i : i + 1], freedom, noise_dof[h], level)
-        root[i], square[i] = debiased(power[i], freedom)
-        p_zero[i] = zero_test(power[i], freedom, noise_dof[h])
+    freedoms = np.stack([2.0 * count[kept], noise_dof[kept]], axis=1)
+    for freedom, own_dof in np.unique(freedoms, axis=0).tolist():  # holds alike are solved together: few calls a night
+        here = (freedoms == [freedom, own_dof]).all(axis=1)
+        low[here], high[here] = amplitude_interval(power[here], freedom, own_dof, level)
+        root[here], square[here] = debiased(power[here], freedom)
+        p_zero[here] = zero_test(power[here], freedom, own_dof)
     unit = noise[kept] / weight[kept]
     scatter = _scatter(fringes, label, noise, dof, raw, weight, count)
     return HoldContrast(
