@@ -20,7 +20,6 @@ from planner.logbook.documents import IN_ONE_QUESTION
 from planner.logbook.states import ENDS, INTENDED, WITHDRAWN, may_become
 from planner.logbook.tables import OPEN_ATTEMPTS, Anchor, Attempt, Lease, Night, Quarantine, Result, Revision, Rig
 
-
 LATEST = 16  # attempts looked at for the rig's ordinal: more than a rig holds at once
 
 
@@ -49,7 +48,8 @@ class OpenAttempt:
     revision: int
     state: str
     boot: str | None
-    digest: str
+    settle_s: float
+    intended_us: int
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -111,7 +111,8 @@ class Step:
             revision=new.revision,
             state=INTENDED,
             boot=new.boot,
-            digest=new.digest,
+            settle_s=new.settle_s,
+            intended_us=self._now_us,
         )
 
     def change(self, attempt_id: int, state: str, *, ordinal: int | None = None, why: str | None = None) -> None:
@@ -261,7 +262,8 @@ class Driving:
                     Attempt.revision,
                     Attempt.state,
                     Attempt.boot,
-                    Attempt.digest,
+                    Attempt.settle_s,
+                    Attempt.intended_us,
                 )
                 .where(Attempt.night_id == night_id, OPEN_ATTEMPTS)
                 .order_by(Attempt.position, Attempt.try_number)
