@@ -18,6 +18,8 @@ COMMANDS: dict[str, tuple[str, str]] = {
     "check": ("planner.cli.check", "Find every problem of a sequence or rig file"),
     "compile": ("planner.cli.compile", "Compile a sequence to its shots and timelines"),
     "timeline": ("planner.cli.timeline", "Draw the timeline of one shot"),
+    "run": ("planner.cli.run", "Book a night and run it, or go on where one stopped"),
+    "nights": ("planner.cli.nights", "List the nights in the logbook"),
     "results": ("planner.cli.results", "Say what a night measured: contrast, coherence time, lifetime"),
 }
 

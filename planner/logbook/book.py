@@ -6,15 +6,15 @@ from dataclasses import dataclass
 from types import TracebackType
 from typing import TYPE_CHECKING, Any, Self
 
-from sqlalchemy import Connection, func, insert, select
+from sqlalchemy import Connection, func, insert, select, update
 
 from planner.errors import LogbookConflict
 from planner.logbook import schema
 from planner.logbook.backends import Backend, backend_for
 from planner.logbook.border import border
 from planner.logbook.documents import get_document
-from planner.logbook.states import NIGHT_OPEN
-from planner.logbook.tables import Attempt, Audit, Night, Request, Revision, Rig
+from planner.logbook.states import NIGHT_OPEN, NIGHT_OVER
+from planner.logbook.tables import OPEN_ATTEMPTS, Attempt, Audit, Night, Request, Revision, Rig
 
 if TYPE_CHECKING:
     from planner.logbook.booking import NewNight
@@ -215,6 +215,15 @@ class Logbook:
         with self.writing() as connection:
             night_id = store_night(connection, new, now_us=now_us, who=who)
         return self.night(night_id)
+
+    def end_night(self, night_id: int, *, now_us: int, who: str, why: str) -> None:
+        """End a night for good (LogbookConflict if shots of it have no end yet)."""
+        with self.writing() as connection:
+            still = connection.scalar(select(func.count()).where(Attempt.night_id == night_id, OPEN_ATTEMPTS))
+            if still:
+                raise LogbookConflict(f"{still} shots of this night may still be at the rig; run it first")
+            connection.execute(update(Night).where(Night.id == night_id).values(state=NIGHT_OVER, why=why))
+            add_audit(connection, at_us=now_us, who=who, what="night_over", night_id=night_id, detail={"why": why})
 
     def night_plan(self, night_id: int) -> "NightPlan":
         """The order in force and the shot tables of a night (LogbookDamaged if a hash does not match)."""

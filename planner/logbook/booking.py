@@ -1,6 +1,6 @@
 """Writing a booked night: its texts, tables, timelines and revision 1 in one transaction."""
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, field
 from typing import Any
 
@@ -25,7 +25,7 @@ class NewRequest:
     title: str
     sequence_text: str
     table: ShotTable
-    timelines: Sequence[Mapping[str, Any]]  # documents, in the order of the table's `timeline` column
+    timelines: Iterable[Mapping[str, Any]]  # documents, in the order of the table's `timeline` column
     goal: str
     seed: int
     share: float = 1.0

@@ -3,6 +3,7 @@
 import hashlib
 import zlib
 from collections.abc import Iterable
+from itertools import islice
 
 from sqlalchemy import Connection, insert, select
 
@@ -18,22 +19,22 @@ def sha256(content: bytes) -> str:
 
 
 def put_documents(connection: Connection, kind: str, contents: Iterable[bytes]) -> list[str]:
-    """Store each content that is not there yet; returns their hashes in order."""
-    given = [(sha256(content), content) for content in contents]
-    held = dict(given)
-    names = list(held)
-    known: set[str] = set()
-    for start in range(0, len(names), IN_ONE_QUESTION):
-        part = names[start : start + IN_ONE_QUESTION]
-        known.update(connection.scalars(select(Document.sha256).where(Document.sha256.in_(part))))
-    rows = [
-        {"sha256": name, "kind": kind, "size": len(held[name]), **_kept(held[name])}
-        for name in names
-        if name not in known
-    ]
-    if rows:
-        connection.execute(insert(Document), rows)
-    return [name for name, _ in given]
+    """Store each content that is not there yet, some at a time; returns their hashes in order."""
+    names: list[str] = []
+    waiting = iter(contents)
+    while part := list(islice(waiting, IN_ONE_QUESTION)):
+        given = [(sha256(content), content) for content in part]
+        held = dict(given)
+        known = set(connection.scalars(select(Document.sha256).where(Document.sha256.in_(list(held)))))
+        rows = [
+            {"sha256": name, "kind": kind, "size": len(content), **_kept(content)}
+            for name, content in held.items()
+            if name not in known
+        ]
+        if rows:
+            connection.execute(insert(Document), rows)
+        names += [name for name, _ in given]
+    return names
 
 
 def _kept(content: bytes) -> dict[str, str | bytes]:
