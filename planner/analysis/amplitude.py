@@ -27,7 +27,7 @@ from planner.errors import InputError
 LARGE_NCP = 2000.0
 # With this many residual degrees of freedom the noise counts as known: its own error changes an interval by < 0.1 %.
 KNOWN_NOISE_DOF = 5000.0
-NODES = 40
+NEGLECTED = 1e-8  # probability left out at each end of the noise's own distribution
 TABLE_TOP = 14.0  # in units of the noise; beyond it one fringe's amplitude is Gaussian to 1e-3 of the noise
 TABLE_SIZE = 420
 TOLERANCES = {"xatol": 1e-9, "xrtol": 1e-9, "fatol": 0.0, "frtol": 0.0}
@@ -73,13 +73,14 @@ def noise_nodes(noise_dof: float) -> tuple[FloatArray, FloatArray]:
         raise InputError("the noise has no degrees of freedom left: it cannot be estimated from these residuals")
     if noise_dof >= KNOWN_NOISE_DOF:
         return np.ones(1), np.ones(1)
-    if noise_dof <= 60:
-        nodes, weights = special.roots_genlaguerre(NODES, noise_dof / 2 - 1)
-        return 2 * nodes / noise_dof, weights / weights.sum()
-    # the cube root of chi-squared is close to Gaussian (Wilson and Hilferty 1931): 1e-6 here
-    z, weights = special.roots_hermitenorm(NODES // 2)
-    spread = 2 / (9 * noise_dof)
-    return np.maximum(1 - spread + z * np.sqrt(spread), 1e-6) ** 3, weights / weights.sum()
+    # The trapezoidal rule on the logarithm of the ratio: its density is smooth there and dies off on both sides, so
+    # the rule converges faster than any power of the step.
+    ends = special.chdtri(noise_dof, np.array([1 - NEGLECTED, NEGLECTED])) / noise_dof
+    step = min(0.3, 0.35 * np.sqrt(2 / noise_dof))
+    logs = np.arange(np.log(ends[0]), np.log(ends[1]) + step, step)
+    log_density = noise_dof / 2 * (logs - np.exp(logs))
+    weights = np.exp(log_density - log_density.max())
+    return np.exp(logs), weights / weights.sum()
 
 
 def power_cdf(power: FloatArray, dof: float, ncp: FloatArray, noise_dof: float = np.inf) -> FloatArray:
