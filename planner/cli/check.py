@@ -33,7 +33,7 @@ def find_problems(file: str) -> tuple[list[Problem], tuple[str, ...]]:
     """All problems of a file, and the notes of compiling it where there are none."""
     from planner.sequence.nodes import read_text
     from planner.sequence.reader import parse_sequence
-    from planner.sequence.rigfile import is_rig_text, parse_rig, read_rig, rig_path
+    from planner.sequence.rigfile import is_rig_text, parse_rig, rig_of
 
     try:
         text = read_text(file, "sequence or rig file")
@@ -41,7 +41,7 @@ def find_problems(file: str) -> tuple[list[Problem], tuple[str, ...]]:
             parse_rig(text, file)
             return [], ()
         sequence = parse_sequence(text, file)
-        rig = read_rig(rig_path(file, sequence.rig))
+        rig = rig_of(sequence)
         from planner.sequence.compiler import compile_sequence  # after the cheap checks: it loads numpy
 
         return [], compile_sequence(sequence, rig).notes

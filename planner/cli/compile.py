@@ -27,12 +27,12 @@ def command(file: str, out: str | None, as_json: bool) -> None:
     """
     from planner.sequence.compiler import compile_sequence
     from planner.sequence.reader import read_sequence
-    from planner.sequence.rigfile import read_rig, rig_path
+    from planner.sequence.rigfile import rig_of
 
     if out is not None and Path(out).suffix not in WRITERS:
         raise InputError(f'--out ends in .csv or .parquet; found "{out}"')
     sequence = read_sequence(file)
-    compiled = compile_sequence(sequence, read_rig(rig_path(file, sequence.rig)))
+    compiled = compile_sequence(sequence, rig_of(sequence))
     if out is not None:
         write_shots(compiled, out)
     summary = {

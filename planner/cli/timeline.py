@@ -30,12 +30,12 @@ def command(file: str, shot: int, out: str | None, as_json: bool) -> None:
     from planner.sequence.compiler import compile_sequence
     from planner.sequence.drawing import lay_out, text_drawing
     from planner.sequence.reader import read_sequence
-    from planner.sequence.rigfile import read_rig, rig_path
+    from planner.sequence.rigfile import rig_of
 
     if out is not None and Path(out).suffix not in PICTURES:
         raise InputError(f'--out ends in .svg or .png; found "{out}"')
     sequence = read_sequence(file)
-    compiled = compile_sequence(sequence, read_rig(rig_path(file, sequence.rig)))
+    compiled = compile_sequence(sequence, rig_of(sequence))
     if shot >= len(compiled.table):
         raise InputError(f"there is no shot {shot}; this sequence has shots 0 to {len(compiled.table) - 1}")
     document = compiled.timelines.document(int(compiled.table.timeline[shot]))

@@ -39,6 +39,13 @@ class _Against:
             if name not in self.rig.setting_limits:
                 continue
             low, high = self.rig.setting_limits[name]
+            unit_text = self.rig.limit_units.get(name, setting.unit)
+            if unit(unit_text).dimension != unit(setting.unit).dimension:
+                self.problem(
+                    f"settings.{name}.unit",
+                    f'the rig file\'s limits of "{name}" are in "{unit_text}"; the setting has "{setting.unit}"',
+                )
+                continue
             within = f"{format_quantity(low, setting.unit)} to {format_quantity(high, setting.unit)}"
             hint = f'the rig file allows "{name}" from {within}'
             if not low <= setting.rest <= high:

@@ -4,30 +4,42 @@ A cell is one point of the crossed sweeps in one state of the slow switches; a p
 phase in every state of the fast switches. The table holds `repeats` packets of every cell, packet after packet.
 """
 
-from dataclasses import dataclass
+from collections.abc import Mapping
+from dataclasses import dataclass, field
 from math import prod
+from typing import TYPE_CHECKING, TypeVar
 
 import numpy as np
 
-from planner.arrays import FloatArray, IntArray
+from planner.arrays import FloatArray, IntArray, SignArray
 from planner.errors import Problem, ProblemsFound
 from planner.quantities import format_quantity
 from planner.sequence.against_rig import check_against_rig
-from planner.sequence.model import Rig, Sequence
+from planner.sequence.model import Check, Rig, Sequence
 from planner.sequence.shot_checks import Rounding, ShotChecks
 from planner.sequence.table import ShotTable
 from planner.sequence.timeline import TimelineSet
 
+if TYPE_CHECKING:
+    from numpy.typing import NDArray
+
+Number = TypeVar("Number", np.float64, np.int64, np.int8)
 CHUNK = 65_536  # timelines looked at together: bounds the memory, not the answer
 
 
 @dataclass(frozen=True, kw_only=True)
 class Compiled:
-    """A compiled sequence. `notes` are sentences for people: rounding, length of the night."""
+    """A compiled sequence.
+
+    `notes` are sentences for people: rounding, length of the night. `checks` holds one small table for each kind of
+    check shot, by name: cell and packet are -1, and a switch column is 0, which leaves the switch as it stands. Check
+    shots play the last timelines of the set.
+    """
 
     table: ShotTable
     timelines: TimelineSet
     notes: tuple[str, ...]
+    checks: Mapping[str, ShotTable] = field(default_factory=dict)
 
 
 def compile_sequence(sequence: Sequence, rig: Rig) -> Compiled:
@@ -42,24 +54,34 @@ def compile_sequence(sequence: Sequence, rig: Rig) -> Compiled:
     if problems:
         raise ProblemsFound(_ordered(problems))
     template = _template(sequence)
-    timelines, of_template = _timelines(sequence, rig, template)
+    columns, of_template = _distinct(sequence, template)
+    first_check = len(of_template.first)
+    count = first_check + len(sequence.checks)
+    columns = {name: _with_checks(sequence, name, column) for name, column in columns.items()}
+    separation = _separation(sequence, template, of_template)
     checks = ShotChecks(sequence, rig)
-    ticks = np.empty(len(timelines), dtype=np.int64)
-    for start in range(0, len(timelines), CHUNK):
-        rows = slice(start, min(start + CHUNK, len(timelines)))
-        chunk = {name: column[rows] for name, column in timelines.columns.items()}
-        separation = _separation(sequence, template, of_template, rows)
-        ticks[rows] = checks.look_at(chunk, rows.stop - rows.start, separation)
+    ticks = np.empty(count, dtype=np.int64)
+    for start in range(0, count, CHUNK):
+        rows = slice(start, min(start + CHUNK, count))
+        chunk = {name: column[rows] for name, column in columns.items()}
+        apart = None if separation is None else separation[rows]
+        ticks[rows] = checks.look_at(chunk, rows.stop - rows.start, apart)
     if checks.problems:
         raise ProblemsFound(_ordered(checks.problems))
-    timelines = TimelineSet(
-        stages=sequence.stages, rig=rig, columns=timelines.columns, count=len(timelines), ticks=ticks
-    )
-    table = _table(sequence, rig, template, of_template, ticks)
+    timelines = TimelineSet(stages=sequence.stages, rig=rig, columns=columns, count=count, ticks=ticks)
+    table = _table(sequence, timelines, template, of_template.code)
     problem = _longer_than_the_night(sequence, table)
     if problem:
         raise ProblemsFound([problem])
-    return Compiled(table=table, timelines=timelines, notes=_notes(sequence, table, checks.rounding))
+    return Compiled(
+        table=table,
+        timelines=timelines,
+        notes=_notes(sequence, table, checks.rounding),
+        checks={
+            check.name: _check_table(sequence, timelines, check, first_check + number)
+            for number, check in enumerate(sequence.checks)
+        },
+    )
 
 
 def _ordered(problems: list[Problem]) -> list[Problem]:
@@ -73,7 +95,7 @@ class _Template:
     cells: int
     per_packet: int
     settings: dict[str, FloatArray]
-    switches: dict[str, "np.typing.NDArray[np.int8]"]
+    switches: dict[str, SignArray]
     codes: dict[str, tuple[IntArray, int]]  # varying setting -> (number of its value, how many values)
 
 
@@ -114,57 +136,92 @@ def _template(sequence: Sequence) -> _Template:
     )
 
 
-def _timelines(sequence: Sequence, rig: Rig, template: _Template) -> tuple[TimelineSet, IntArray]:
-    """The distinct timelines, lengths not yet known, and which of them each template row plays."""
+@dataclass(frozen=True, kw_only=True)
+class _Distinct:
+    """`code`: the timeline that each template row plays; `first`: for each timeline, the first row that plays it."""
+
+    code: IntArray
+    first: IntArray
+
+
+def _distinct(sequence: Sequence, template: _Template) -> tuple[dict[str, FloatArray], _Distinct]:
+    """The settings that timelines depend on, one row for each distinct timeline, and who plays which."""
     used = {name for stage in sequence.stages for expression in stage.expressions() for name in expression.names}
-    rows = template.cells * template.per_packet
-    code = np.zeros(rows, dtype=np.int64)
+    code = np.zeros(template.cells * template.per_packet, dtype=np.int64)
     for name in template.settings:
         if name in used and name in template.codes:
             number, size = template.codes[name]
             # numbering anew after each setting keeps the codes small, so the product never overflows
             code = np.unique(code * size + number, return_inverse=True)[1].reshape(-1)
     first = np.unique(code, return_index=True)[1]
-    columns = {name: template.settings[name][first] for name in template.settings if name in used}
-    none = np.zeros(len(first), dtype=np.int64)
-    return TimelineSet(stages=sequence.stages, rig=rig, columns=columns, count=len(first), ticks=none), code
+    columns = {name: column[first] for name, column in template.settings.items() if name in used}
+    return columns, _Distinct(code=code, first=first)
 
 
-def _separation(sequence: Sequence, template: _Template, of_template: IntArray, rows: slice) -> FloatArray | None:
-    """Largest separation (m) met with each timeline of `rows`; None where no setting plays that part."""
+def _with_checks(sequence: Sequence, name: str, column: FloatArray) -> FloatArray:
+    """A setting's column over timelines, with a row for each kind of check shot at the end."""
+    rest = sequence.settings[name].rest
+    return np.concatenate([column, [check.settings.get(name, rest) for check in sequence.checks]])
+
+
+def _separation(sequence: Sequence, template: _Template, of_template: _Distinct) -> FloatArray | None:
+    """Largest separation (m) met with each timeline; None where no setting plays that part."""
     name = sequence.roles.get("separation")
     if name is None:
         return None
-    column = np.abs(template.settings[name])
-    if name not in template.codes:
-        return np.full(rows.stop - rows.start, column[0])
-    found = np.zeros(rows.stop - rows.start)
-    inside = (of_template >= rows.start) & (of_template < rows.stop)
-    np.maximum.at(found, of_template[inside] - rows.start, column[inside])
-    return found
+    found = np.zeros(len(of_template.first))
+    np.maximum.at(found, of_template.code, np.abs(template.settings[name]))
+    return np.abs(_with_checks(sequence, name, found))
 
 
-def _table(sequence: Sequence, rig: Rig, template: _Template, of_template: IntArray, ticks: IntArray) -> ShotTable:
+def _durations(timelines: TimelineSet, timeline: IntArray) -> FloatArray:
+    """Whole cycles, s. To the picosecond, the finest tick: then 3.25 s is the float 3.25."""
+    seconds: FloatArray = np.round(timelines.ticks * timelines.rig.tick_s + timelines.rig.dead_time_s, 12)[timeline]
+    return seconds
+
+
+def _table(sequence: Sequence, timelines: TimelineSet, template: _Template, code: IntArray) -> ShotTable:
     cells, size, repeats = template.cells, template.per_packet, sequence.fringe.repeats
 
-    def spread(column: "np.typing.NDArray[np.generic]") -> "np.typing.NDArray[np.generic]":
+    def spread(column: "NDArray[Number]") -> "NDArray[Number]":
         """A template column for all repeats: packet after packet, the repeats of a cell together."""
         packets = column.reshape(cells, 1, size)
         return np.broadcast_to(packets, (cells, repeats, size)).reshape(-1)
 
     settings = {name: spread(column) for name, column in template.settings.items()}
-    timeline = spread(of_template)
+    timeline = spread(code)
     packet = np.repeat(np.arange(cells * repeats), size)
     return ShotTable(
-        settings=settings,  # type: ignore[arg-type]
-        switches={name: spread(column) for name, column in template.switches.items()},  # type: ignore[misc]
-        hold_s=settings[sequence.roles["hold"]],  # type: ignore[arg-type]
-        phase_rad=settings[sequence.roles["readout"]],  # type: ignore[arg-type]
-        duration_s=(ticks * rig.tick_s + rig.dead_time_s)[timeline],
+        settings=settings,
+        switches={name: spread(column) for name, column in template.switches.items()},
+        hold_s=settings[sequence.roles["hold"]],
+        phase_rad=settings[sequence.roles["readout"]],
+        duration_s=_durations(timelines, timeline),
         cell=packet // repeats,
         packet=packet,
         repeat=packet % repeats,
-        timeline=timeline,  # type: ignore[arg-type]
+        timeline=timeline,
+    )
+
+
+def _check_table(sequence: Sequence, timelines: TimelineSet, check: Check, timeline: int) -> ShotTable:
+    count = check.shots
+    settings = {
+        name: np.full(count, check.settings.get(name, setting.rest)) for name, setting in sequence.settings.items()
+    }
+    readout = settings[sequence.roles["readout"]]
+    plays = np.full(count, timeline, dtype=np.int64)
+    outside = np.full(count, -1, dtype=np.int64)
+    return ShotTable(
+        settings=settings,
+        switches={name: np.zeros(count, dtype=np.int8) for name in sequence.switches},
+        hold_s=settings[sequence.roles["hold"]],
+        phase_rad=np.mod(readout, 2 * np.pi),
+        duration_s=_durations(timelines, plays),
+        cell=outside,
+        packet=outside,
+        repeat=np.arange(count),
+        timeline=plays,
     )
 
 

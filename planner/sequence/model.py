@@ -259,6 +259,7 @@ class Rig:
     dead_time_s: float  # added to every shot: what the rig needs between shots
     lines: Mapping[str, Line]
     setting_limits: Mapping[str, tuple[float, float]] = field(default_factory=dict)  # SI
+    limit_units: Mapping[str, str] = field(default_factory=dict)  # units that those limits are written in
     latitude_deg: float | None = None
     longitude_deg: float | None = None
     height_m: float = 0.0

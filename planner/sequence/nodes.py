@@ -196,6 +196,8 @@ class Node:
             close = nearest(name, allowed)
             hint = f'did you mean "{close}"?' if close else f"allowed here: {_listed(allowed)}"
             self.document.problem((*self.path, name), f'unknown key "{name[:40]}"', hint, key=True)
+        if "about" in known:
+            known["about"].text()
         for name, key in allowed.items():
             if key.required and name not in known:
                 self.document.problem(self.path, f'"{name}" is missing: {key.says}', key=True)

@@ -86,11 +86,13 @@ def _read(document: Document, text: str) -> Sequence:
         tick_tolerance_rad=(tolerance.quantity("rad", above=0.0) if tolerance else None) or DEFAULT_TICK_TOLERANCE_RAD,
         places={where(path): document.positions.line_column(at) for path, at in document.positions.values.items()},
     )
-    about = fields.get("about")
-    if about:
-        about.text()
     if not document.problems:
         _unused(document, sequence)
+    if "hold" in roles and not document.problems and not any(roles["hold"] in s.lasts.names for s in stages):
+        fields.known["roles"].fields("roles").known["hold"].problem(
+            "the hold setting is in no stage's length: every shot would hold as long",
+            'use it: lasts = "hold"',
+        )
     _too_many(document, sweeps, fringe, switches)
     return sequence
 

@@ -4,9 +4,10 @@ import re
 from pathlib import Path as FilePath
 from urllib.parse import urlsplit
 
-from planner.quantities import format_quantity, unit
+from planner.errors import Problem, ProblemsFound, QuantityError
+from planner.quantities import format_quantity, split_quantity, unit
 from planner.sequence.keys import RIG
-from planner.sequence.model import Line, Rig
+from planner.sequence.model import Line, Rig, Sequence
 from planner.sequence.nodes import Fields, Node, parse_document, read_text, show
 from planner.sequence.reader import read_version
 
@@ -31,6 +32,30 @@ def rig_path(sequence_file: str, rig: str) -> FilePath:
     return FilePath(sequence_file).parent / rig
 
 
+def rig_of(sequence: Sequence) -> Rig:
+    """Read the rig file that a sequence names.
+
+    Raises:
+        ProblemsFound: there is no such file (at the place in the sequence that names it), or the rig file's problems.
+    """
+    path = rig_path(sequence.file, sequence.rig)
+    if not path.is_file():
+        line, column = sequence.places.get("rig", (0, 0))
+        raise ProblemsFound(
+            [
+                Problem(
+                    file=sequence.file,
+                    line=line,
+                    column=column,
+                    where="rig",
+                    message=f"there is no rig file {path}",
+                    hint="the name counts from the folder of this file",
+                )
+            ]
+        )
+    return read_rig(path)
+
+
 def parse_rig(text: str, file: str) -> Rig:
     """Check the text of a rig file; `file` is the name that problems carry.
 
@@ -41,11 +66,10 @@ def parse_rig(text: str, file: str) -> Rig:
     fields = document.root().fields("")
     read_version(fields, "nightfringe_rig", VERSION, "a rig file")
     tick_node, dead_node, limits_node = fields.get("tick"), fields.get("dead_time"), fields.get("limits")
-    lattice_node, site_node, about = fields.get("lattice"), fields.get("site"), fields.get("about")
-    if about:
-        about.text()
+    lattice_node, site_node = fields.get("lattice"), fields.get("site")
     wavelength, axis = _lattice(lattice_node.fields("lattice")) if lattice_node else (None, 0.0)
     latitude, longitude, height, zone = _site(site_node.fields("site")) if site_node else (None, None, 0.0, "UTC")
+    limits = _limits(limits_node) if limits_node else {}
     rig = Rig(
         name=_text(fields.get("name")),
         text=text,
@@ -54,7 +78,8 @@ def parse_rig(text: str, file: str) -> Rig:
         tick_s=(tick_node.quantity("s", low=SHORTEST_TICK_S, high=1.0) if tick_node else None) or 1.0,
         dead_time_s=(dead_node.quantity("s", low=0.0, high=HOUR_S) if dead_node else None) or 0.0,
         lines=_lines(fields.get("lines")),
-        setting_limits=_limits(limits_node) if limits_node else {},
+        setting_limits={name: (low, high) for name, (low, high, _) in limits.items()},
+        limit_units={name: unit_text for name, (_, _, unit_text) in limits.items()},
         latitude_deg=latitude,
         longitude_deg=longitude,
         height_m=height,
@@ -108,9 +133,7 @@ def _line(name: str, node: Node) -> Line | None:
     fields = node.fields("lines.<name>")
     unit_node, rest_node, range_node = fields.get("unit"), fields.get("rest"), fields.get("range")
     rate_node, shortest_node, load_node = fields.get("max_rate"), fields.get("shortest"), fields.get("load_per_hour")
-    duty_node, about = fields.get("duty"), fields.get("about")
-    if about:
-        about.text()
+    duty_node = fields.get("duty")
     unit_text = unit_node.unit_text() if unit_node else None
     if unit_text is None:
         return None
@@ -155,22 +178,19 @@ def _duty(fields: Fields) -> tuple[float, float]:
     return share or 1.0, over or 0.0
 
 
-def _limits(node: Node) -> dict[str, tuple[float, float]]:
-    """Limits of settings; each pair is in any unit, since the rig file does not know the settings' own."""
+def _limits(node: Node) -> dict[str, tuple[float, float, str]]:
+    """Limits of settings and the unit they are in: any, since the rig file does not know the settings' own."""
     found = {}
     for name, child in node.named("limits").items():
         unit_text = _unit_of_pair(child)
         bounds = child.pair(unit_text, bare=True)
         if bounds is not None:
-            found[name] = bounds
+            found[name] = (*bounds, unit_text)
     return found
 
 
 def _unit_of_pair(node: Node) -> str:
     """The unit that the first quantity of a pair carries; "" where it is a plain number or cannot be read."""
-    from planner.errors import QuantityError
-    from planner.quantities import split_quantity
-
     first = node.value[0] if isinstance(node.value, list) and node.value else None
     if not isinstance(first, str):
         return ""

@@ -30,14 +30,12 @@ def read_stages(node: Node | None, dimensions: Mapping[str, Dimension]) -> tuple
 
 def _stage(node: Node, dimensions: Mapping[str, Dimension], names: dict[str, None]) -> Stage | None:
     fields = node.fields("stages[]")
-    name_node, lasts_node, about = fields.get("name"), fields.get("lasts"), fields.get("about")
+    name_node, lasts_node = fields.get("name"), fields.get("lasts")
     name = name_node.text() if name_node else None
     if name_node and name is not None:
         if not name.strip() or name in names:
             name_node.problem("expected a name that no other stage has")
         names[name] = None
-    if about:
-        about.text()
     lasts = read_expression(lasts_node, dimensions, TIME) if lasts_node else None
     levels, ramps, pulses = _levels(fields.get("levels"), dimensions), [], []
     for line, child in _named(fields.get("ramps"), "lines"):

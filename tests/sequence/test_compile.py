@@ -59,7 +59,8 @@ def test_every_example_compiles_to_a_balanced_table(path: Path) -> None:
     assert len(set(np.bincount(table.packet))) == 1
     assert len(set(np.bincount(table.cell))) == 1
     assert np.all(table.cell == table.packet // (table.repeat.max() + 1))
-    assert set(table.timeline) == set(range(len(made.timelines)))
+    played = set(table.timeline) | {int(row) for check in made.checks.values() for row in check.timeline}
+    assert played == set(range(len(made.timelines)))
     assert np.all((table.phase_rad >= 0) & (table.phase_rad < 2 * math.pi))
     for column in (*table.settings.values(), *table.switches.values(), table.hold_s, table.duration_s, table.timeline):
         assert len(column) == len(table)
@@ -158,6 +159,24 @@ def test_each_form_of_sweep_gives_its_values(sweep: str, values: list[float]) ->
     """Listed, linear, log, around a centre, in steps, with and without units."""
     found = small(("hold = [1, 2, 5]", f"hold = {sweep}")).sweeps[0].values["hold"]
     np.testing.assert_allclose(found, values, rtol=1e-12, atol=0)
+
+
+def test_check_shots_have_a_table_and_a_timeline_of_their_own() -> None:
+    """Check shots stand beside the plan's shots: their settings, their length, and no say about switches."""
+    made = compiled(
+        ("[[stages]]", '[switches.kick]\nstates = ["up", "down"]\n[[stages]]'),
+        ("[goal]", '[checks.short]\nevery = "30 min"\nsettings = { hold = "0.3 s", readout = 450 }\nshots = 3\n[goal]'),
+    )
+    assert len(made.table) == 3 * 4 * 2 * 2
+    check = made.checks["short"]
+    assert len(check) == 3
+    np.testing.assert_allclose(check.hold_s, 0.3, rtol=1e-15)
+    np.testing.assert_allclose(check.phase_rad, np.pi / 2, rtol=1e-12)
+    np.testing.assert_allclose(check.duration_s, 0.84 + 0.1, rtol=1e-12)
+    assert set(check.switches["kick"]) == {0}
+    assert set(check.packet) == {-1}
+    assert made.timelines.document(int(check.timeline[0]))["ticks"] == 84_000_000
+    assert set(check.timeline).isdisjoint(set(made.table.timeline))
 
 
 def problems_of(*changes: tuple[str, str], rig: tuple[tuple[str, str], ...] = ()) -> list[tuple[str, str]]:
