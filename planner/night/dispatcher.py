@@ -28,7 +28,7 @@ from planner.link.messages import Description, Intent, ShotReport
 from planner.logbook import states
 from planner.logbook.book import Logbook, NightRow
 from planner.logbook.driving import Driving, NewAttempt, OpenAttempt, Step
-from planner.night.contact import Contact, Hands, StopAsked
+from planner.night.contact import FIRST_WAIT_S, Contact, Hands, StopAsked
 from planner.night.dwells import Dwells
 from planner.night.fates import CONFIRMED, Fate, fate_of, withdraw
 from planner.night.reconciling import ask_about, deal_with_strangers
@@ -319,6 +319,9 @@ class Dispatcher:
         except (RigUnreachable, RigUnknown, RigMalformed) as error:
             self._meet_again(error, key)
             return
+        if report.state == "unknown":  # it may have restarted: what else it held is in question too
+            self._ask_anew()
+            return
         if report.state == "running":
             self._seen_running.add(key)
             self._contact.say("a shot runs")
@@ -404,7 +407,10 @@ class Dispatcher:
         self._contact.say(f"waiting: {error}")
         if isinstance(error, RigMalformed):
             self._contact.put_aside(error, key)
-            self._contact.rest(0.1)
+            self._contact.rest(FIRST_WAIT_S)
+        self._ask_anew()
+
+    def _ask_anew(self) -> None:
         self._describe()
         self._reconcile()
 

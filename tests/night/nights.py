@@ -116,6 +116,11 @@ class Bench:
         self.host = Host(self.rig, SimulatedClock(start, f"boot-{next(self.boots)}"), journal=journal)
         return self.host
 
+    def close(self) -> None:
+        """Close logbook and journal."""
+        self.host.close()
+        self.book.close()
+
     def hands(self) -> Hands:
         def key() -> str:
             self.keys.append(new_key())

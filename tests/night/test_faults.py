@@ -1,0 +1,173 @@
+"""Nights through random faults and power cuts on both sides, judged by the rig's own journal.
+
+A script of faults is drawn; at each call to the rig, and at each commit, the next item of the script says what goes
+wrong. A crash of the program is an exception that nothing in it catches; the next dispatcher is a new program.
+"""
+
+from collections import Counter
+from collections.abc import Iterator
+from contextlib import contextmanager
+from typing import Any
+
+import pytest
+from hypothesis import HealthCheck, given, settings
+from hypothesis import strategies as st
+
+from planner.errors import RigMalformed, RigNotNow, RigUnknown, RigUnreachable
+from planner.link.journal import read_journal
+from planner.logbook import states
+from tests.night.conftest import NewBench
+from tests.night.nights import Bench
+
+SHOTS = 6
+MOST_PROGRAMS = 40
+CALLS = ("describe", "now", "put", "ask", "since", "withdraw", "ack", "move_clock")
+FAULTS = (
+    "fine",
+    "crash before",
+    "crash after",
+    "no answer before",
+    "no answer after",
+    "unreachable",
+    "nonsense",
+    "not now",
+    "rig restarts before",
+    "rig restarts after",
+)
+
+
+class Crash(BaseException):
+    """The program is gone: nothing of it runs any more."""
+
+
+class Faulty:
+    """The rig of a bench behind a link on which things go wrong as the script says."""
+
+    def __init__(self, bench: Bench, script: list[str]) -> None:
+        self._bench = bench
+        self._script = script
+
+    def __getattr__(self, name: str) -> Any:
+        if name not in CALLS:
+            raise AttributeError(name)
+
+        def call(*args: Any) -> Any:
+            fault = self._script.pop() if self._script else "fine"
+            self._before(fault)
+            answer = getattr(self._bench.host, name)(*args)
+            self._after(fault)
+            return answer
+
+        return call
+
+    def _before(self, fault: str) -> None:
+        if fault == "crash before":
+            raise Crash
+        if fault == "no answer before":
+            raise RigUnknown("the request was lost on its way")
+        if fault == "unreachable":
+            raise RigUnreachable("nobody listens")
+        if fault == "not now":
+            raise RigNotNow("full", retry_after_s=1.0, full=True)
+        if fault == "rig restarts before":
+            self._restart()
+            raise RigUnreachable("nobody listens")
+
+    def _after(self, fault: str) -> None:
+        if fault == "crash after":
+            raise Crash
+        if fault == "no answer after":
+            raise RigUnknown("the answer was lost on its way")
+        if fault == "nonsense":
+            raise RigMalformed("nonsense", answer="<html>")
+        if fault == "rig restarts after":
+            self._restart()
+            raise RigUnknown("the connection broke")
+
+    def _restart(self) -> None:
+        self._bench.host.close()
+        self._bench.boot_rig()
+
+
+def with_commits_that_fail(bench: Bench, script: list[str]) -> None:
+    """Let the program die just before or just after a commit, as the script says."""
+    whole = bench.book.writing
+
+    @contextmanager
+    def writing() -> Iterator[Any]:
+        fault = script.pop() if script else "fine"
+        with whole() as connection:
+            yield connection
+            if fault == "crash before":
+                raise Crash
+        if fault == "crash after":
+            raise Crash
+
+    bench.book.writing = writing  # type: ignore[method-assign]
+
+
+def run_through(bench: Bench, calls: list[str], commits: list[str]) -> None:
+    """Programs one after the other until the night is done."""
+    with_commits_that_fail(bench, commits)
+    for _ in range(MOST_PROGRAMS):
+        try:
+            if bench.dispatcher(Faulty(bench, calls)).run() == "done":
+                return
+        except Crash:
+            continue
+    raise AssertionError(f"the night was not done after {MOST_PROGRAMS} programs; left: {calls} {commits}")
+
+
+def judge(bench: Bench) -> None:
+    """What must hold whatever happened."""
+    starts: Counter[str] = Counter()
+    ended: dict[str, str] = {}
+    for facts in read_journal(bench.folder / "rig.jsonl"):
+        if facts["event"] == "start":
+            starts[facts["key"]] += 1
+        if facts["event"] == "end":
+            assert facts["key"] not in ended
+            ended[facts["key"]] = facts["report"]["state"]
+    assert set(starts.values()) <= {1}  # at most one start per key
+    with bench.book.reading() as connection:
+        rows = connection.exec_driver_sql("SELECT key, state, position, id FROM attempts").all()
+        results = set(connection.exec_driver_sql("SELECT attempt_id FROM results").scalars())
+    states_of = {row[0]: row[1] for row in rows}
+    assert set(starts) <= set(states_of)  # nothing ran that was not on disk before
+    assert set(states_of.values()) <= set(states.ENDS)  # every attempt has its one terminal record
+    for key, state in states_of.items():
+        if state == states.DONE:
+            assert ended.get(key) == "done"
+        if state == states.WITHDRAWN:
+            assert key not in starts  # certain not to have run
+        if key in starts and state not in (states.DONE, states.FAILED):
+            assert state == states.LOST
+    assert {row[3] for row in rows if row[1] == states.DONE} == results
+    columns = bench.columns()
+    done = columns["state"] == "done"
+    missing = set(range(SHOTS)) - set(columns["shot"][done])
+    tried = Counter(columns["shot"][(columns["state"] == "lost") | (columns["state"] == "failed")])
+    assert all(tried[shot] >= 3 for shot in missing)  # every shot was measured, or tried as often as allowed
+    assert len(set(columns["shot"][done])) == int(done.sum())  # and none measured twice
+
+
+@settings(max_examples=60, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture])
+@given(
+    calls=st.lists(st.sampled_from(FAULTS), max_size=30),
+    commits=st.lists(st.sampled_from(["fine", "fine", "crash before", "crash after"]), max_size=15),
+)
+def test_nothing_is_lost_or_done_twice(calls: list[str], commits: list[str], new_bench: NewBench) -> None:
+    """Whatever goes wrong and whenever either side dies: one start a key, one end an attempt, no result missing."""
+    bench = new_bench(shots=SHOTS, journal=True, length_s=36000.0)
+    run_through(bench, calls, commits)
+    judge(bench)
+    bench.close()
+
+
+@pytest.mark.parametrize("fault", FAULTS)
+@pytest.mark.parametrize("when", [0, 3, 5, 9])
+def test_one_fault_at_a_time(fault: str, when: int, new_bench: NewBench) -> None:
+    """Each kind of fault alone, early, in the middle and late: the night goes on by itself or at the next start."""
+    bench = new_bench(shots=SHOTS, journal=True, length_s=36000.0)
+    run_through(bench, [fault, *["fine"] * when], [])
+    judge(bench)
