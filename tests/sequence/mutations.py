@@ -69,9 +69,14 @@ def _pile_up(text: str, rng: random.Random) -> str:
     )
 
 
+def _grow(text: str, rng: random.Random) -> str:
+    """A plan as large as the language allows, or larger."""
+    return re.sub(r"repeats = \d+", f"repeats = {rng.choice((1000, 30_000, 300_000, 4_000_000))}", text)
+
+
 EDITS: tuple[tuple[Callable[[str, random.Random], str], int], ...] = (
     (_replace_value, 8), (_replace_number, 8), (_edit_character, 4), (_edit_lines, 4), (_swap_words, 4), (_cut, 1),
-    (_pile_up, 1),
+    (_pile_up, 1), (_grow, 1),
 )  # fmt: skip
 
 
