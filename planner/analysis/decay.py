@@ -1,30 +1,30 @@
-"""Contrast against hold and atom number against hold: two processes, two time scales, never one parameter."""
+"""A fall with hold and its time scale, common to contrast and atom number."""
 
 from dataclasses import dataclass
 
 import numpy as np
 from scipy import special
 
-from planner.analysis.amplitude import noise_nodes, power_cdf
-from planner.analysis.curve_fit import hessian, maximise, profile_interval
-from planner.analysis.holds import HoldContrast
+from planner.analysis.shapes import Shape, log_curve
 from planner.arrays import FloatArray
 from planner.errors import NotEnoughData
 
 # The likelihood is searched for decays this much faster than the shortest distance between holds, and no further:
 # beyond it every hold but the first has lost everything and the data cannot tell rates apart.
 FASTEST = 30.0
-ZERO_TEST = 0.01
 
 
 @dataclass(frozen=True, kw_only=True)
 class Decay:
-    """An exponential decay, value(T) = start exp(-T / time_s), with intervals.
+    """A fall with hold, with intervals.
 
     `time_s` is the hold at which the value has fallen to 1/e of its short-hold value; inf where no decay is seen.
     `high_s` is inf where the data allow no decay at all, `low_s` is 0 where they allow any speed.
     """
 
+    shape: Shape
+    parameters: FloatArray  # (n_parameter,) log start, rate in 1/s, then the shape's own
+    covariance: FloatArray  # (n_parameter, n_parameter)
     start: float
     start_low: float
     start_high: float
@@ -32,86 +32,38 @@ class Decay:
     low_s: float
     high_s: float
     level: float
-    log_start: float
-    rate_per_s: float
-    covariance: FloatArray  # (2, 2) of log start and rate
+    log_likelihood: float  # up to a constant that is the same for every shape
     goodness: float  # sum of squared deviations of the holds from the curve, over their variance
     goodness_dof: int
     goodness_p: float
 
     def value(self, hold_s: FloatArray) -> FloatArray:
         """The curve at `hold_s`, same shape."""
-        return np.exp(self.log_start - self.rate_per_s * np.asarray(hold_s, float))
+        return np.exp(log_curve(self.shape, self.parameters, hold_s))
 
     def band(self, hold_s: FloatArray) -> tuple[FloatArray, FloatArray]:
         """Pointwise band of the curve at the fit's level, two arrays of the shape of `hold_s`."""
-        hold_s = np.asarray(hold_s, float)
-        (aa, ar), (_, rr) = self.covariance
-        error = np.sqrt(np.maximum(aa - 2 * hold_s * ar + hold_s**2 * rr, 0.0))
+        slope = log_slopes(self.shape, self.parameters, hold_s, np.sqrt(np.diag(self.covariance)))
+        error = np.sqrt(np.maximum(np.einsum("ij,jk,ik->i", slope, self.covariance, slope), 0.0))
         step = special.ndtri(0.5 + self.level / 2) * error
         return self.value(hold_s) * np.exp(-step), self.value(hold_s) * np.exp(step)
 
 
-def power_log_density(power: FloatArray, dof: FloatArray, ncp: FloatArray) -> FloatArray:
-    """Log density of noncentral chi-squared by its saddlepoint, up to a constant; shapes broadcast.
-
-    Exact for no noncentrality up to the constant (Stirling's), and in the limit of a large one; in between the
-    constant wanders by less than 1/(6 dof).
-
-    References:
-        Daniels, Ann. Math. Stat. 25, 631 (1954) (from memory); checked here against scipy's ncx2.
-    """
-    power = np.maximum(power, 1e-12)
-    u = (dof + np.sqrt(dof**2 + 4 * ncp * power)) / (2 * power)
-    t = 0.5 * (1 - u)
-    curvature = 2 * dof / u**2 + 4 * ncp / u**3
-    return np.asarray(ncp * t / u - 0.5 * dof * np.log(u) - t * power - 0.5 * np.log(curvature))
-
-
-class _ContrastLikelihood:
-    """Log likelihood of the holds' powers given the true contrast of each, the estimated noise averaged over."""
-
-    def __init__(self, holds: HoldContrast) -> None:
-        sizes = [noise_nodes(float(dof)) for dof in holds.noise_dof]
-        most = max(len(nodes) for nodes, _ in sizes)
-        self.holds = holds
-        self.nodes = np.ones((len(holds), most))
-        self.log_weights = np.full((len(holds), most), -np.inf)
-        for h, (nodes, weights) in enumerate(sizes):
-            self.nodes[h, : len(nodes)] = nodes
-            with np.errstate(divide="ignore"):
-                self.log_weights[h, : len(nodes)] = np.log(weights * nodes)
-        self.dof: FloatArray = np.asarray(2.0 * holds.fringes[:, None])
-        self.power: FloatArray = np.asarray(holds.power[:, None] * self.nodes)
-
-    def per_hold(self, squared_contrast: FloatArray) -> FloatArray:
-        ncp = (squared_contrast / 4 * self.holds.weight / self.holds.noise)[:, None] * self.nodes
-        each = self.log_weights + power_log_density(self.power, self.dof, ncp)
-        largest = each.max(axis=1)
-        return np.asarray(largest + np.log(np.exp(each - largest[:, None]).sum(axis=1)))
-
-    def __call__(self, parameters: FloatArray) -> float:
-        log_squared = np.clip(2 * (parameters[0] - parameters[1] * self.holds.hold_s), -80, 20)
-        return float(self.per_hold(np.exp(log_squared)).sum())
-
-
-def _first_guess(hold_s: FloatArray, squared: FloatArray, variance: FloatArray) -> tuple[float, float]:
-    """Log amplitude and rate of the best exponential for squared values, by a scan of rates; exact in amplitude."""
-    span = hold_s.max() - hold_s.min()
-    gap = np.diff(np.unique(hold_s)).min()
-    rates = np.concatenate([[0.0], np.geomspace(0.02 / span, FASTEST / 3 / gap, 120)])
-    shape = np.exp(-2 * rates[:, None] * (hold_s - hold_s.min())[None, :])
-    top = np.maximum((shape * squared / variance).sum(1) / (shape**2 / variance).sum(1), 1e-12)
-    cost = ((squared - top[:, None] * shape) ** 2 / variance).sum(1)
-    best = int(cost.argmin())
-    return 0.5 * float(np.log(top[best])) + float(rates[best] * hold_s.min()), float(rates[best])
+def log_slopes(shape: Shape, parameters: FloatArray, hold_s: FloatArray, scale: FloatArray) -> FloatArray:
+    """Derivatives of the log curve by each parameter, (n_hold, n_parameter), by steps of a hundredth of `scale`."""
+    moves = np.diag(0.01 * np.maximum(scale, 1e-9))
+    ahead = [log_curve(shape, parameters + move, hold_s) for move in moves]
+    behind = [log_curve(shape, parameters - move, hold_s) for move in moves]
+    return np.asarray((np.array(ahead) - np.array(behind)).T / (2 * np.diag(moves)))
 
 
 def search_limits(hold_s: FloatArray) -> tuple[float, float]:
+    """Slowest and fastest rate that is searched, 1/s."""
     return -FASTEST / (hold_s.max() - hold_s.min()), FASTEST / float(np.diff(np.unique(hold_s)).min())
 
 
 def need_two_holds(hold_s: FloatArray, what: str) -> None:
+    """NotEnoughData unless there are two holds at least."""
     if len(np.unique(hold_s)) < 2:
         raise NotEnoughData(
             f"{what} was measured at {len(np.unique(hold_s))} hold: a time scale needs two holds at least, better six"
@@ -119,121 +71,6 @@ def need_two_holds(hold_s: FloatArray, what: str) -> None:
 
 
 def as_times(low_rate: float, high_rate: float, limits: tuple[float, float]) -> tuple[float, float]:
+    """The interval of a rate as one of a time in s, open ends as 0 and inf."""
     low_s = 0.0 if high_rate >= limits[1] else float(1 / high_rate)
     return low_s, (float(1 / low_rate) if low_rate > 0 else np.inf)
-
-
-def fit_contrast_decay(holds: HoldContrast, *, level: float = 0.95) -> Decay:
-    """Maximum likelihood of an exponential fall of contrast, on the exact distribution of squared amplitudes.
-
-    Holds whose fringe has vanished count as what they are, so they neither pull the fit up (the Rice bias) nor need to
-    be left out. The interval is the profile likelihood's, widened or narrowed by how much more or less the packets of a
-    hold scatter than white noise would make them.
-
-    Args:
-        holds: contrast per hold. level: coverage of the intervals.
-
-    Returns:
-        Decay; times in s, contrast without unit.
-
-    Raises:
-        NotEnoughData: fewer than two holds, no contrast at any hold, or contrast that grows with hold.
-
-    References:
-        Profile likelihood with robust scale: Rotnitzky and Jewell, Biometrika 77, 485 (1990) (from memory).
-    """
-    need_two_holds(holds.hold_s, "contrast")
-    # the smallest of many p values is small by chance; Bonferroni keeps the stated level over all holds
-    if holds.p_zero.min() * len(holds) > ZERO_TEST:
-        raise NotEnoughData(
-            "no hold shows a fringe that stands out of the noise (smallest p "
-            f"{holds.p_zero.min():.2g} over {len(holds)} holds): there is no contrast whose decay could be fitted"
-        )
-    likelihood = _ContrastLikelihood(holds)
-    rough = holds.expected_squared_variance(holds.squared)
-    guess = np.array(_first_guess(holds.hold_s, holds.squared, rough))
-    information = _information(holds, guess)
-    scale = np.sqrt(np.diag(np.linalg.pinv(information)))
-    scale = np.clip(scale, 1e-6, [1.0, 1.0 / (holds.hold_s.max() - holds.hold_s.min()) + abs(guess[1])])
-    best = maximise(likelihood, guess, scale)
-    bread: FloatArray = np.asarray(np.linalg.inv(_positive(-hessian(likelihood, best, 0.3 * scale))))
-    factor, freedom = _scatter_factor(holds, best, bread)
-    covariance: FloatArray = bread * factor
-    errors = np.sqrt(np.diag(covariance))
-    step = special.stdtrit(freedom, 0.5 + level / 2) if np.isfinite(freedom) else special.ndtri(0.5 + level / 2)
-    limits = search_limits(holds.hold_s)
-    low_rate, high_rate = profile_interval(
-        likelihood, best, errors, index=1, drop=0.5 * factor * step**2, limits=limits
-    )
-    if high_rate <= 0:
-        raise NotEnoughData(
-            "contrast grows with hold, beyond its error: no coherence time describes this; look for a hold setting "
-            "that changes something else too"
-        )
-    low_s, high_s = as_times(low_rate, high_rate, limits)
-    expected = np.exp(2 * (best[0] - best[1] * holds.hold_s))
-    goodness = _goodness(holds, expected) / max(factor, 1.0)
-    dof = len(holds) - 2
-    return Decay(
-        start=float(np.exp(best[0])),
-        start_low=float(np.exp(best[0] - step * errors[0])),
-        start_high=float(np.exp(best[0] + step * errors[0])),
-        time_s=float(1 / best[1]) if best[1] > 0 else np.inf,
-        low_s=low_s,
-        high_s=high_s,
-        level=level,
-        log_start=float(best[0]),
-        rate_per_s=float(best[1]),
-        covariance=covariance,
-        goodness=goodness,
-        goodness_dof=dof,
-        goodness_p=float(special.chdtrc(dof, goodness)) if dof else np.nan,
-    )
-
-
-def _goodness(holds: HoldContrast, expected: FloatArray) -> float:
-    """Sum of squared Gaussian equivalents of the holds' powers: chi-squared distributed at any contrast."""
-    ncp = expected / 4 * holds.weight / holds.noise
-    total = 0.0
-    for h in range(len(holds)):
-        dof, noise_dof = 2.0 * holds.fringes[h], float(holds.noise_dof[h])
-        below = float(power_cdf(holds.power[h], dof, ncp[h], noise_dof))
-        total += float(special.ndtri(np.clip(below, 1e-12, 1 - 1e-12))) ** 2
-    return total
-
-
-def _positive(matrix: FloatArray) -> FloatArray:
-    """The matrix with eigenvalues held above rounding, so that a flat direction gives a large, finite variance."""
-    values, vectors = np.linalg.eigh(matrix)
-    return np.asarray((vectors * np.maximum(values, 1e-9 * abs(values).max())) @ vectors.T)
-
-
-def _slopes(holds: HoldContrast, parameters: FloatArray) -> tuple[FloatArray, FloatArray]:
-    """Expected squared contrast and its derivatives by (log start, rate): (n_hold,), (n_hold, 2)."""
-    expected = np.exp(np.clip(2 * (parameters[0] - parameters[1] * holds.hold_s), -80, 20))
-    return expected, np.stack([2 * expected, -2 * expected * holds.hold_s], axis=1)
-
-
-def _information(holds: HoldContrast, parameters: FloatArray) -> FloatArray:
-    expected, slope = _slopes(holds, parameters)
-    return np.asarray(slope.T @ (slope / holds.expected_squared_variance(expected)[:, None]))
-
-
-def _scatter_factor(holds: HoldContrast, parameters: FloatArray, bread: FloatArray) -> tuple[float, float]:
-    """How many times the white-noise variance the rate's variance is, from packet scatter; and its freedom.
-
-    1 with infinite freedom where too few packets repeat a hold to say.
-    """
-    expected, slope = _slopes(holds, parameters)
-    white = holds.expected_squared_variance(expected)
-    pull = (bread @ (slope / white[:, None]).T)[1] ** 2  # of the rate, per unit variance of each hold
-    repeats = holds.fringes - 1.0
-    seen = np.isfinite(holds.squared_scatter) & (repeats > 0)
-    parts = pull[seen] * white[seen]
-    if not seen.any() or parts.sum() < 0.5 * (pull * white).sum():
-        return 1.0, np.inf
-    measured = pull[seen] * holds.squared_scatter[seen]
-    freedom = float(parts.sum() ** 2 / (parts**2 / repeats[seen]).sum())
-    if freedom < 4:
-        return 1.0, np.inf
-    return float(measured.sum() / parts.sum()), freedom

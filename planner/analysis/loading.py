@@ -7,6 +7,7 @@ from numpy.polynomial import legendre
 from scipy import special
 
 from planner.analysis.decay import Decay, as_times, need_two_holds, search_limits
+from planner.analysis.shapes import EXPONENTIAL
 from planner.arrays import FloatArray, IntArray
 from planner.errors import NotEnoughData
 
@@ -156,6 +157,10 @@ def fit_atom_decay(holds: HoldAtoms, *, level: float = 0.95) -> Decay:
         )
     low_s, high_s = as_times(low_rate, high_rate, search_limits(holds.hold_s))
     return Decay(
+        shape=EXPONENTIAL,
+        parameters=np.array([log_start, rate]),
+        covariance=covariance,
+        log_likelihood=-0.5 * goodness,
         start=float(np.exp(log_start)),
         start_low=float(np.exp(log_start - step * errors[0])),
         start_high=float(np.exp(log_start + step * errors[0])),
@@ -163,9 +168,6 @@ def fit_atom_decay(holds: HoldAtoms, *, level: float = 0.95) -> Decay:
         low_s=low_s,
         high_s=high_s,
         level=level,
-        log_start=float(log_start),
-        rate_per_s=float(rate),
-        covariance=covariance,
         goodness=goodness,
         goodness_dof=dof,
         goodness_p=float(special.fdtrc(dof, holds.freedom, goodness / dof)) if dof else np.nan,

@@ -6,16 +6,19 @@ from dataclasses import dataclass
 import numpy as np
 from scipy import special
 
+from planner.analysis.contrast_decay import ShapeScore, compare_shapes, fit_contrast_decay
 from planner.analysis.data import NightData, choose, distinct_holds, fractions, shot_variance
-from planner.analysis.decay import Decay, fit_contrast_decay
+from planner.analysis.decay import Decay
 from planner.analysis.fringe import Fringes, fit_fringes
 from planner.analysis.holds import HoldContrast, combine
 from planner.analysis.loading import HoldAtoms, atoms_per_hold, fit_atom_decay
+from planner.analysis.shapes import EXPONENTIAL, Shape
 from planner.arrays import FloatArray, IntArray
 from planner.errors import NotEnoughData
 
 # A packet's residual this unlikely is named; among the few thousand packets of a night white noise makes none.
 STANDS_OUT = 1e-7
+POOR_FIT = 0.01  # below this p value a curve is said not to describe its points
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -59,6 +62,7 @@ class CurveResults:
     pooled_contrast: FloatArray  # (n_hold,) from quadratures averaged over the night, biased upwards; NaN if unsolved
     coherence: Decay | None
     why_no_coherence: str
+    shapes: tuple[ShapeScore, ...]  # compared where one exponential does not describe the contrast; else empty
     lifetime: Decay | None
     why_no_lifetime: str
     noise: Noise | None
@@ -159,7 +163,9 @@ def measure_noise(fringes: Fringes) -> tuple[Noise | None, int]:
     )
 
 
-def _curve(data: NightData, request: int, settings: dict[str, float], detection: float, level: float) -> CurveResults:
+def _curve(
+    data: NightData, request: int, settings: dict[str, float], shape: Shape, detection: float, level: float
+) -> CurveResults:
     holds, which = distinct_holds(data.hold_s)
     group, count = fringe_groups(data)
     y = fractions(data)
@@ -167,12 +173,15 @@ def _curve(data: NightData, request: int, settings: dict[str, float], detection:
     hold_of[group] = which
     flat = fit_fringes(data.phase_rad, y, shot_variance(data, detection_noise_atoms=detection), group, count)
     contrast, coherence, why_no_coherence = None, None, ""
+    shapes: tuple[ShapeScore, ...] = ()
     pooled = np.full(len(holds), np.nan)
     try:
         contrast = combine(flat, hold_of, holds, level=level)
         cells = fit_fringes(data.phase_rad, y, shot_variance(data, detection_noise_atoms=detection), which, len(holds))
         pooled = cells.contrast_plain
-        coherence = fit_contrast_decay(contrast, level=level)
+        coherence = fit_contrast_decay(contrast, shape=shape, level=level)
+        if coherence.goodness_p < POOR_FIT:
+            shapes = compare_shapes(contrast)
     except NotEnoughData as error:
         why_no_coherence = str(error)
     # projection noise depends on where on the fringe a shot lies, and that is known only after a first fit
@@ -203,6 +212,7 @@ def _curve(data: NightData, request: int, settings: dict[str, float], detection:
         pooled_contrast=pooled,
         coherence=coherence,
         why_no_coherence=why_no_coherence,
+        shapes=shapes,
         lifetime=lifetime,
         why_no_lifetime=why_no_lifetime,
         noise=noise,
@@ -216,14 +226,18 @@ def summarise(
     data: NightData,
     *,
     cut_flags: Sequence[str] = (),
+    shape: Shape = EXPONENTIAL,
     detection_noise_atoms: float = 0.0,
     level: float = 0.95,
 ) -> NightResults:
     """Everything that a night's measuring shots say to first order.
 
     Args:
-        data: the night. cut_flags: flags of the rig that exclude a shot, declared beforehand. detection_noise_atoms:
-        what the detector adds to each output's count, one standard deviation; used as weight only. level: coverage.
+        data: the night.
+        cut_flags: flags of the rig that exclude a shot, declared beforehand.
+        shape: how contrast falls; atoms always as one exponential.
+        detection_noise_atoms: what the detector adds to each output's count, one standard deviation; a weight only.
+        level: coverage of the intervals.
 
     Returns:
         NightResults, a curve for each request and for each combination of other swept settings.
@@ -241,7 +255,7 @@ def summarise(
         mine = used.rows(used.request == request)
         label, settings = curve_labels(mine, distinct_holds(mine.hold_s)[1])
         for number, values in enumerate(settings):
-            curves.append(_curve(mine.rows(label == number), request, values, detection_noise_atoms, level))
+            curves.append(_curve(mine.rows(label == number), request, values, shape, detection_noise_atoms, level))
     return NightResults(
         attempts=chosen.total,
         used=len(used),
@@ -270,18 +284,22 @@ def plain_words(curve: CurveResults) -> list[str]:
             "every loss of contrast, shot-to-shot phase noise too (which lowers contrast as exp(-s^2/2) and grows "
             "with hold): it is not decoherence alone."
         )
-    if curve.coherence is not None and curve.coherence.goodness_p < 0.01:
+    if curve.coherence is not None and curve.coherence.goodness_p < POOR_FIT:
+        shape = curve.coherence.shape
         words.append(
-            f"One exponential does not describe the contrast (p = {curve.coherence.goodness_p:.2g}): read the "
+            f"The contrast is not described by {shape.words} (p = {curve.coherence.goodness_p:.2g}): read the "
             "coherence time as a summary, and the points as the result."
         )
+        if curve.shapes and curve.shapes[0].shape != shape:
+            better = curve.shapes[0].shape
+            words.append(f"Of the shapes tried, {better.words} describes it best (--shape {better.name}).")
     if curve.lifetime is None:
         words.append(f"No population lifetime: {curve.why_no_lifetime}.")
     else:
         words.append(
             "The population lifetime is the same for the atom number; it is fitted apart, and says nothing about phase."
         )
-        if curve.lifetime.goodness_p < 0.01:
+        if curve.lifetime.goodness_p < POOR_FIT:
             words.append(
                 f"One exponential does not describe the atom number (p = {curve.lifetime.goodness_p:.2g}): loss early "
                 "and late differ."

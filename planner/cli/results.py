@@ -16,6 +16,13 @@ if TYPE_CHECKING:
 @click.argument("night", required=False)
 @click.option("--logbook", help="the logbook: a file, or a postgresql:// address")
 @click.option("--cut-flag", "cut_flags", multiple=True, help="leave out shots that the rig flagged so; may be repeated")
+@click.option(
+    "--shape",
+    type=click.Choice(["exponential", "levels-off", "power-law", "two-classes"]),
+    default="exponential",
+    show_default=True,
+    help="how contrast falls with hold",
+)
 @click.option("--picture", type=click.Path(), help="draw contrast and atoms against hold: .png, .pdf or .svg")
 @click.option("--fringe-picture", type=click.Path(), help="draw the fringes of every hold: .png, .pdf or .svg")
 @click.option("--json", "as_json", is_flag=True, help="print one JSON object")
@@ -23,6 +30,7 @@ def command(
     night: str | None,
     logbook: str | None,
     cut_flags: tuple[str, ...],
+    shape: str,
     picture: str | None,
     fringe_picture: str | None,
     as_json: bool,
@@ -35,6 +43,7 @@ def command(
 
     from planner.analysis.data import NightData
     from planner.analysis.results import summarise
+    from planner.analysis.shapes import SHAPES
     from planner.logbook import default_place, open_logbook
     from planner.plots import style
 
@@ -43,7 +52,7 @@ def command(
     with open_logbook(logbook or default_place()) as book:
         row = book.night(night)
         data = NightData.from_columns(book.night_columns(row.id))
-    results = summarise(data, cut_flags=cut_flags)
+    results = summarise(data, cut_flags=cut_flags, shape=SHAPES[shape])
     drawn = draw(results, row.name, picture, fringe_picture)
     if as_json:
         click.echo(json.dumps({"night": row.name, "state": row.state, **document(results), "pictures": drawn}))
@@ -195,6 +204,16 @@ def _curve_document(curve: "CurveResults") -> dict[str, Any]:
         "holds": holds,
         "coherence": _decay_document(curve.coherence),
         "why_no_coherence": curve.why_no_coherence or None,
+        "shapes": [
+            {
+                "shape": entry.shape.name,
+                "parameters": entry.parameters,
+                "log_likelihood": _number(entry.log_likelihood),
+                "score": _number(entry.score),
+                "predictive": _number(entry.predictive),
+            }
+            for entry in curve.shapes
+        ],
         "lifetime": _decay_document(curve.lifetime),
         "why_no_lifetime": curve.why_no_lifetime or None,
         "noise": None
@@ -207,7 +226,8 @@ def _decay_document(decay: "Decay | None") -> dict[str, Any] | None:
     if decay is None:
         return None
     names = ("time_s", "low_s", "high_s", "start", "start_low", "start_high", "goodness", "goodness_dof", "goodness_p")
-    return {name: _number(getattr(decay, name)) for name in names}
+    numbers = {name: _number(getattr(decay, name)) for name in names}
+    return {"shape": decay.shape.name, **numbers, "parameters": [_number(value) for value in decay.parameters]}
 
 
 def _number(value: Any) -> float | int | None:

@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 from scipy import stats
 
-from planner.analysis.decay import fit_contrast_decay, power_log_density
+from planner.analysis.contrast_decay import fit_contrast_decay, power_log_density
 from planner.analysis.fringe import fit_fringes
 from planner.analysis.holds import HoldContrast, combine
 from planner.analysis.loading import HoldAtoms, atoms_per_hold, fit_atom_decay
