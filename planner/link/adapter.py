@@ -85,3 +85,7 @@ class Adapter(ABC):
     def objection(self, settings: Mapping[str, float], switches: Mapping[str, str]) -> str | None:
         """Why this rig will not play such a shot (beyond the limits of each setting by itself), or None."""
         return None
+
+    def close(self) -> None:
+        """The host's program is ending: leave the rig safe, and let a shot under way return soon."""
+        return

@@ -102,6 +102,7 @@ class _Server(uvicorn.Server):
     def __init__(self, config: uvicorn.Config, host: Host, adapter: Adapter, announce: Callable[[], None]) -> None:
         super().__init__(config)
         self._host = host
+        self._adapter = adapter
         self._announce = announce
         self._player = Player(host, adapter) if isinstance(host.clock, RealClock) else None
 
@@ -112,6 +113,9 @@ class _Server(uvicorn.Server):
         self._announce()
 
     async def shutdown(self, sockets: list[socket.socket] | None = None) -> None:
+        if self._player is not None:
+            await asyncio.to_thread(self._player.stop, LAST_SHOT_S)
+        self._adapter.close()
         if self._player is not None:
             await asyncio.to_thread(self._player.stop, LAST_SHOT_S)
         self._host.close()
