@@ -6,14 +6,14 @@ wrong. A crash of the program is an exception that nothing in it catches; the ne
 
 from collections import Counter
 from collections.abc import Iterator
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from typing import Any
 
 import pytest
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
-from planner.errors import RigMalformed, RigNotNow, RigUnknown, RigUnreachable
+from planner.errors import LinkError, RigMalformed, RigNotNow, RigUnknown, RigUnreachable
 from planner.link.journal import read_journal
 from planner.logbook import states
 from tests.night.conftest import NewBench
@@ -33,7 +33,9 @@ FAULTS = (
     "not now",
     "rig restarts before",
     "rig restarts after",
+    "arrives late",
 )
+LATE = 4  # calls between the sending and the arrival of a shot that comes late
 
 
 class Crash(BaseException):
@@ -46,6 +48,7 @@ class Faulty:
     def __init__(self, bench: Bench, script: list[str]) -> None:
         self._bench = bench
         self._script = script
+        self._on_its_way: list[tuple[int, Any]] = []  # calls left until it arrives, key and intent
 
     def __getattr__(self, name: str) -> Any:
         if name not in CALLS:
@@ -53,12 +56,24 @@ class Faulty:
 
         def call(*args: Any) -> Any:
             fault = self._script.pop() if self._script else "fine"
+            self._deliver()
+            if fault == "arrives late" and name == "put":
+                self._on_its_way.append((LATE, args))
+                raise RigUnknown("no answer came")
             self._before(fault)
             answer = getattr(self._bench.host, name)(*args)
             self._after(fault)
             return answer
 
         return call
+
+    def _deliver(self) -> None:
+        """A request that was slow on the network comes in now, whatever the program has done since."""
+        self._on_its_way = [(left - 1, args) for left, args in self._on_its_way]
+        for left, args in self._on_its_way:
+            if left == 0:
+                with suppress(LinkError):
+                    self._bench.host.put(*args)
 
     def _before(self, fault: str) -> None:
         if fault == "crash before":
@@ -151,7 +166,7 @@ def judge(bench: Bench) -> None:
     assert len(set(columns["shot"][done])) == int(done.sum())  # and none measured twice
 
 
-@settings(max_examples=60, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture])
+@settings(max_examples=40, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture])
 @given(
     calls=st.lists(st.sampled_from(FAULTS), max_size=30),
     commits=st.lists(st.sampled_from(["fine", "fine", "crash before", "crash after"]), max_size=15),
