@@ -19,6 +19,7 @@ COMMANDS: dict[str, tuple[str, str]] = {
     "compile": ("planner.cli.compile", "Compile a sequence to its shots and timelines"),
     "timeline": ("planner.cli.timeline", "Draw the timeline of one shot"),
     "run": ("planner.cli.run", "Book a night and run it, or go on where one stopped"),
+    "rig": ("planner.cli.rig", "Start the stand-in rig, or show what a rig says of itself"),
     "nights": ("planner.cli.nights", "List the nights in the logbook"),
     "results": ("planner.cli.results", "Say what a night measured: contrast, coherence time, lifetime"),
 }
