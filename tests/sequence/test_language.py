@@ -160,6 +160,18 @@ def test_rig_values_are_read_in_si() -> None:
     assert gallery.wavelength_m == 866e-9
 
 
+def test_sweeps_together_are_bounded() -> None:
+    """Sweeps that move together multiply no shots, so their values have a bound of their own."""
+    text = changed(
+        (
+            "hold = [1, 2, 5]",
+            'hold = { from = 1, to = 5, count = 150000 }\ndepth = { from = 1, to = 5, count = 150000, with = "hold" }',
+        )
+    )
+    with pytest.raises(ProblemsFound, match="more than 200,000 values together"):
+        parse_sequence(text, "wide.toml")
+
+
 def test_windows_line_ends_change_nothing() -> None:
     """The same file with CR LF gives the same sequence and the same places."""
     assert parse_sequence(SMALL.replace("\n", "\r\n"), "small.toml").places == small().places

@@ -113,6 +113,31 @@ def test_load_in_an_hour_is_summed_over_shots() -> None:
             check_order_limits(made, rig, start, shot)
 
 
+@pytest.mark.parametrize("piece", [7, 16_384])
+def test_load_over_an_order_of_unequal_shots(piece: int, monkeypatch: pytest.MonkeyPatch) -> None:
+    """Weak shots, then strong ones: the worst hour ends with the last strong one and cuts a weak one in two."""
+    monkeypatch.setattr(limits, "PIECE", piece)
+    made = compile_sequence(small(("hold = [1, 2, 5]", "hold = [40]\ndepth = [5, 10]")), small_rig())
+    strong = made.table.settings["depth"] == 10.0
+    shot = np.concatenate([np.full(60, np.flatnonzero(~strong)[0]), np.full(60, np.flatnonzero(strong)[0])])
+    start = np.concatenate([[0.0], np.cumsum(made.table.duration_s[shot])[:-1]])
+    # all segments of the lattice in one row, judged by the function that is itself checked against a direct count
+    edges = made.timelines.edges(made.table.timeline[shot])
+    track, line = edges.tracks["lattice"], made.timelines.rig.lines["lattice"]
+    lengths = (track.lengths(edges.ticks) * 1e-8).T.reshape(-1, 1)
+    begins = (start[:, None] + (track.start * 1e-8).T).reshape(-1, 1)
+    worst = worst_window(
+        begins, lengths, track.load(line, (track.lengths(edges.ticks) * 1e-8)).T.reshape(-1, 1), 3600.0
+    )
+    for share, refused in ((1 + 1e-6, False), (1 - 1e-6, True)):
+        rig = small_rig(('"20000 Er s"', f'"{worst[0] * share:.6f} Er s"'))
+        if refused:
+            with pytest.raises(LimitExceeded, match="Er s within an hour"):
+                check_order_limits(made, rig, start, shot)
+        else:
+            check_order_limits(made, rig, start, shot)
+
+
 def test_a_single_shot_beyond_the_duty_is_refused_when_compiling() -> None:
     """A shot that alone breaks a window is a problem of the sequence."""
     with pytest.raises(ProblemsFound, match=r"away from rest for 60\.0% of 10 s"):
