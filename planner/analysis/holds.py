@@ -6,9 +6,10 @@ puts there, the noise taken from the same packets' residuals. That difference is
 unequally, because both parts see the same scatter.
 """
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
+from scipy import special
 
 from planner.analysis.amplitude import amplitude_interval, debiased, zero_test
 from planner.analysis.fringe import Fringes, group_sums
@@ -17,6 +18,8 @@ from planner.errors import NotEnoughData
 
 # Fewer residual degrees of freedom than this say too little about one hold's noise: the night's is taken instead.
 LEAST_NOISE_DOF = 3
+# White noise makes a residual this unlikely in one of a million packets.
+NEVER = 1e-6
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -25,6 +28,7 @@ class HoldContrast:
 
     hold_s: FloatArray
     fringes: IntArray  # packets (or packet parts) with a fringe of their own
+    held_back: IntArray  # of these, fringes that scatter far beyond the others and count less
     power: FloatArray  # sum |q|^2 / (noise variance of a quadrature)
     noise: FloatArray  # variance of a shot over its projection noise, as taken for this hold
     noise_dof: FloatArray  # inf where the noise was assumed
@@ -61,13 +65,14 @@ def combine(fringes: Fringes, which: IntArray, hold_s: FloatArray, *, level: flo
     Raises:
         NotEnoughData: no fringe at all.
     """
-    use = fringes.solved
-    if not use.any():
+    if not fringes.solved.any():
         raise NotEnoughData(
             "no packet has three different readout phases with a usable result: there is no fringe to fit"
         )
     size = len(hold_s)
-    label = which[use]
+    label = which[fringes.solved]
+    held_back, fringes = _hold_back(fringes, label, size)
+    use = fringes.solved
     count = np.bincount(label, minlength=size)
     inverse = 1 / fringes.quadrature_variance[use]
     raw = group_sums(label, fringes.amplitude_squared[use] * inverse, size)
@@ -97,6 +102,7 @@ def combine(fringes: Fringes, which: IntArray, hold_s: FloatArray, *, level: flo
     return HoldContrast(
         hold_s=hold_s[kept],
         fringes=count[kept],
+        held_back=held_back[kept],
         power=power,
         noise=noise[kept],
         noise_dof=noise_dof[kept],
@@ -109,6 +115,35 @@ def combine(fringes: Fringes, which: IntArray, hold_s: FloatArray, *, level: flo
         high=2 * np.sqrt(unit) * high,
         p_zero=p_zero,
     )
+
+
+def _hold_back(fringes: Fringes, label: IntArray, size: int) -> tuple[IntArray, Fringes]:
+    """How many fringes of each hold are held back, (size,), and the fringes with a larger variance for those.
+
+    A shot without a fringe (a laser out of lock) spoils its packet, and through the noise its whole hold. A packet's
+    residual says so, and is independent of its contrast and phase; so a packet whose residual is beyond what white
+    noise ever does gets the variance that makes it a usual one. What is usual is the median of the hold, or of the
+    night where that is larger (one hold has few packets).
+    """
+    use = fringes.solved
+    dof = fringes.dof[use].astype(np.float64)
+    judged = dof > 0
+    if not judged.any():
+        return np.zeros(size, dtype=np.int64), fringes
+    unusual = np.where(judged, fringes.chi_squared[use] / np.maximum(special.chdtri(np.maximum(dof, 1), 0.5), 1e-9), 0)
+    night = float(np.median(unusual[judged]))
+    usual = np.full(size, night)
+    for h in np.unique(label[judged]):
+        usual[h] = max(night, float(np.median(unusual[judged & (label == h)])))
+    limit = special.chdtri(np.maximum(dof, 1), NEVER) * np.maximum(usual[label], 1e-12)
+    factor = np.ones(len(fringes))
+    residual = fringes.chi_squared[use]
+    spoilt = judged & (residual > limit)
+    factor[use] = np.where(spoilt, residual / np.maximum(usual[label] * dof, 1e-12), 1.0)
+    fringes = replace(
+        fringes, covariance=fringes.covariance * factor[:, None, None], chi_squared=fringes.chi_squared / factor
+    )
+    return np.bincount(label, weights=spoilt, minlength=size).astype(np.int64), fringes
 
 
 def _scatter(

@@ -16,8 +16,6 @@ from planner.analysis.shapes import EXPONENTIAL, Shape
 from planner.arrays import FloatArray, IntArray
 from planner.errors import NotEnoughData
 
-# A packet's residual this unlikely is named; among the few thousand packets of a night white noise makes none.
-STANDS_OUT = 1e-7
 POOR_FIT = 0.01  # below this p value a curve is said not to describe its points
 
 
@@ -66,7 +64,6 @@ class CurveResults:
     lifetime: Decay | None
     why_no_lifetime: str
     noise: Noise | None
-    bad_packets: int  # residual far beyond the night's noise; kept
     fringe_shots: FringeShots
     unsolved: int  # packets with fewer than three readout phases left
 
@@ -138,28 +135,24 @@ def _is_readout(column: FloatArray, phase_rad: FloatArray) -> bool:
     return bool(np.allclose(np.cos(column - phase_rad), 1.0, rtol=0, atol=1e-9))
 
 
-def measure_noise(fringes: Fringes) -> tuple[Noise | None, int]:
-    """Multiple of shot noise from fringes fitted with their projection noise, and how many fringes stand out."""
+def measure_noise(fringes: Fringes) -> Noise | None:
+    """Multiple of shot noise from fringes fitted with their projection noise; None without residuals."""
     use = fringes.dof > 0
     if not use.any():
-        return None, 0
+        return None
     chi, dof = fringes.chi_squared[use], fringes.dof[use].astype(float)
     mean = chi.sum() / dof.sum()
     # from the scatter between fringes, since technical noise is not Gaussian; on the logarithm it is nearly symmetric
     relative = np.sqrt(max(((chi - mean * dof) ** 2).sum(), 2 * dof.sum() * 1e-12)) / chi.sum()
     step = special.stdtrit(max(len(chi) - 1, 1), 0.975) * relative
     median = float(np.median(chi / special.chdtri(dof, 0.5)))
-    p = special.chdtrc(dof, chi / max(median, 1e-12))
     multiple = float(np.sqrt(mean))
-    return (
-        Noise(
-            multiple=multiple,
-            low=float(multiple * np.exp(-step / 2)),
-            high=float(multiple * np.exp(step / 2)),
-            typical=float(np.sqrt(median)),
-            dof=int(dof.sum()),
-        ),
-        int((p < STANDS_OUT).sum()),
+    return Noise(
+        multiple=multiple,
+        low=float(multiple * np.exp(-step / 2)),
+        high=float(multiple * np.exp(step / 2)),
+        typical=float(np.sqrt(median)),
+        dof=int(dof.sum()),
     )
 
 
@@ -189,7 +182,7 @@ def _curve(
     expected = flat.offset[group] + flat.contrast_plain[group] / 2 * np.cos(turn)
     solved = flat.solved[group]
     variance = shot_variance(data, expected=np.where(solved, expected, 0.5))
-    noise, bad = measure_noise(fit_fringes(data.phase_rad, y, variance, group, count))
+    noise = measure_noise(fit_fringes(data.phase_rad, y, variance, group, count))
     drawn = FringeShots(
         hold_s=holds[which][solved], phase_rad=turn[solved], fraction=(y - flat.offset[group] + 0.5)[solved]
     )
@@ -216,7 +209,6 @@ def _curve(
         lifetime=lifetime,
         why_no_lifetime=why_no_lifetime,
         noise=noise,
-        bad_packets=bad,
         fringe_shots=drawn,
         unsolved=int((~flat.solved).sum()),
     )
@@ -313,10 +305,10 @@ def plain_words(curve: CurveResults) -> list[str]:
             "No packet has more shots than the three numbers of a fringe: the noise was taken to be projection noise, "
             "and the intervals are as right as that."
         )
-    elif curve.bad_packets:
+    elif curve.contrast is not None and curve.contrast.held_back.any():
         words.append(
-            f"{curve.bad_packets} fringe(s) scatter far beyond the rest and were kept. "
-            f"Without rare bad shots the noise would be {curve.noise.typical:.2f} x shot noise."
+            f"{int(curve.contrast.held_back.sum())} fringe(s) scatter far beyond the others and count less in the "
+            f"contrast. Without rare bad shots the noise would be {curve.noise.typical:.2f} x shot noise."
         )
     if curve.unsolved:
         words.append(
