@@ -156,8 +156,7 @@ class Host:
                 record = self._records.get(key)
                 if record is not None and record.finished is not None:
                     del self._records[key]
-                    if record.state != "withdrawn":
-                        self._forgotten[key] = record.intent.digest
+                    self._forgotten[key] = record.intent.digest
 
     def move_clock(self, until: datetime) -> Now:
         """Move a simulated clock to the earlier of `until` and the next event. Raises RigRefused (422)."""
