@@ -50,10 +50,23 @@ def command(file: str, shot: int, out: str | None, as_json: bool) -> None:
     title = f"{sequence.title}, shot {shot}: {', '.join(parts)}"
     if out is None:
         click.echo(title)
-        click.echo(text_drawing(drawing, shutil.get_terminal_size((100, 24)).columns))
+        click.echo(text_drawing(drawing, shutil.get_terminal_size((100, 24)).columns, blocks=_blocks()))
         return
     draw_to_file(drawing, title, out)
     click.echo(f"written: {out}")
+
+
+def _blocks() -> str:
+    """Characters for levels that this terminal can show."""
+    import sys
+
+    from planner.sequence.drawing import BLOCKS, PLAIN_BLOCKS
+
+    try:
+        BLOCKS.encode(sys.stdout.encoding or "ascii")
+    except (UnicodeEncodeError, LookupError):
+        return PLAIN_BLOCKS
+    return BLOCKS
 
 
 def draw_to_file(drawing: "Drawing", title: str, out: str) -> None:

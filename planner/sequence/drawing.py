@@ -10,6 +10,7 @@ from math import log10
 from typing import Any
 
 BLOCKS = "▁▂▃▄▅▆▇█"
+PLAIN_BLOCKS = "_.-=+*%#"  # for terminals that know ASCII alone
 NOT_TO_SCALE = "widths are not to scale: each span is drawn by the logarithm of its length, written below"
 MOST_SPANS = 400
 
@@ -66,8 +67,11 @@ def format_time(seconds: float) -> str:
     return "0 s"
 
 
-def text_drawing(drawing: Drawing, width: int = 100) -> str:
-    """The drawing in characters: one row a line, then the spans with their true start, length and levels."""
+def text_drawing(drawing: Drawing, width: int = 100, *, blocks: str = BLOCKS) -> str:
+    """The drawing in characters: one row a line, then the spans with their true start, length and levels.
+
+    `blocks` are the characters from the lowest to the highest level.
+    """
     name_width = max((len(name) for name in drawing.units), default=4)
     room = max(width - name_width - 2, len(drawing.spans))
     total = sum(span.weight for span in drawing.spans) or 1.0
@@ -79,7 +83,8 @@ def text_drawing(drawing: Drawing, width: int = 100) -> str:
         levels = [level for span in drawing.spans for level in span.levels[name]]
         low, high = min([*levels, 0.0]), max([*levels, 0.0])
         drawn = "".join(
-            _bar(span.levels[name], columns, low, high) for span, columns in zip(drawing.spans, widths, strict=True)
+            _bar(span.levels[name], columns, low, high, blocks)
+            for span, columns in zip(drawing.spans, widths, strict=True)
         )
         rows.append(f"{name:>{name_width}}  {drawn}")
     marks = "".join("|" + " " * (columns - 1) for columns in widths)
@@ -95,12 +100,12 @@ def text_drawing(drawing: Drawing, width: int = 100) -> str:
     return "\n".join(rows)
 
 
-def _bar(levels: tuple[float, float], columns: int, low: float, high: float) -> str:
+def _bar(levels: tuple[float, float], columns: int, low: float, high: float, blocks: str) -> str:
     reach = high - low or 1.0
     bar = ""
     for column in range(columns):
         level = levels[0] + (levels[1] - levels[0]) * (column + 0.5) / columns
-        bar += BLOCKS[min(len(BLOCKS) - 1, int((level - low) / reach * len(BLOCKS)))] if level != 0.0 else "·"
+        bar += blocks[min(len(blocks) - 1, int((level - low) / reach * len(blocks)))] if level != 0.0 else " "
     return bar
 
 

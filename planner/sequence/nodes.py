@@ -79,7 +79,11 @@ class Document:
         """Raise ProblemsFound, in the order of the file, if there is any problem."""
         if self.problems:
             ordered = sorted(dict.fromkeys(self.problems), key=lambda problem: (problem.line, problem.column))
-            raise ProblemsFound(ordered[:MOST_PROBLEMS])
+            shown = ordered[:MOST_PROBLEMS]
+            if len(ordered) > len(shown):
+                rest = f"{len(ordered) - len(shown)} more problems are not listed"
+                shown.append(Problem(file=self.file, line=0, column=0, where="", message=rest, hint="mend these first"))
+            raise ProblemsFound(shown)
 
 
 def whole_file_problem(file: str, message: str, hint: str = "", line: int = 0, column: int = 0) -> ProblemsFound:

@@ -26,7 +26,6 @@ MOST_SHOTS = 4_000_000  # a year of nights of one-second shots is 1e7; a night h
 MOST_SWITCHES = 6
 MOST_SETTINGS = 200
 ROLE_UNITS = {"hold": "s", "readout": "rad", "depth": "Er", "separation": "m", "split": "s"}
-DEFAULT_TICK_TOLERANCE_RAD = 0.01  # the quantum noise of one shot of 10,000 atoms at full contrast
 
 
 def read_sequence(path: str | FilePath) -> Sequence:
@@ -83,7 +82,7 @@ def _read(document: Document, text: str) -> Sequence:
         watch=read_watch(fields.get("watch")),
         knobs=read_knobs(fields.get("knobs"), settings),
         rig=_line(fields.get("rig")),
-        tick_tolerance_rad=(tolerance.quantity("rad", above=0.0) if tolerance else None) or DEFAULT_TICK_TOLERANCE_RAD,
+        tick_tolerance_rad=(tolerance.quantity("rad", above=0.0) if tolerance else None) or Sequence.tick_tolerance_rad,
         places={where(path): document.positions.line_column(at) for path, at in document.positions.values.items()},
     )
     if not document.problems:

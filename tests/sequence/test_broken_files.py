@@ -41,6 +41,12 @@ def test_broken_file_is_reported_at_the_right_line(path: Path) -> None:
         assert "Traceback" not in problem.message
 
 
+def test_long_dotted_keys_never_reach_the_toml_parser() -> None:
+    """tomllib needs the square of a dotted key's parts, so such a key is refused before it."""
+    problems, _ = find_problems(str(Path(__file__).parent / "broken" / "dotted-too-long.toml"))
+    assert [problem.message for problem in problems] == ["a dotted key of more than 64 parts"]
+
+
 @pytest.mark.parametrize("name", ["atom-unknown", "setting-unit-unknown", "two-problems-two-lines", "not-utf8"])
 def test_check_command_ends_with_two_and_says_where(name: str, capsys: pytest.CaptureFixture[str]) -> None:
     """`check --json` prints one object with every key; the human form draws a caret under the place."""

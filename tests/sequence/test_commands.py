@@ -2,11 +2,16 @@
 
 import csv
 import json
+import os
+import subprocess
+import sys
 import xml.etree.ElementTree as ET
 from pathlib import Path
 
+import click
 import numpy as np
 import pytest
+from click.testing import CliRunner
 from pyarrow import parquet
 
 from planner.cli import init as init_module
@@ -136,6 +141,44 @@ def test_init_writes_files_that_check_accepts_and_never_overwrites(
     assert "never overwrites" in capsys.readouterr().err
     assert (tmp_path / "sequence.toml").read_text(encoding="utf-8") == "mine"
     assert not (tmp_path / "rig.toml").exists()
+
+
+def test_questions_are_asked_again_until_the_answer_can_be_used() -> None:
+    """A person's answers go through; a time without a unit is asked for again, saying why."""
+    given: list[Answers] = []
+
+    @click.command()
+    def asks() -> None:
+        given.append(init_module._ask())
+
+    typed = ["first try", "gallery", "Cs-133", "5", "500 ms", "10 s", "6", "", "", "http://127.0.0.1:9000"]
+    done = CliRunner().invoke(asks, input="\n".join(typed) + "\n")
+    assert done.exit_code == 0, done.output
+    assert "found no unit" in done.output
+    assert given == [
+        Answers(
+            title="first try",
+            rig_name="gallery",
+            atom="Cs-133",
+            shortest="500 ms",
+            longest="10 s",
+            holds=6,
+            link="http://127.0.0.1:9000",
+        )
+    ]
+
+
+def test_a_plain_terminal_gets_plain_characters() -> None:
+    """Where the terminal knows ASCII alone the drawing is ASCII, not a traceback."""
+    done = subprocess.run(
+        [sys.executable, "-m", "planner", "timeline", NIGHT_A],
+        capture_output=True,
+        env={**os.environ, "PYTHONIOENCODING": "ascii", "PYTHONUTF8": "0"},
+        check=False,
+        timeout=60,
+    )
+    assert done.returncode == 0, done.stderr
+    assert "#" in done.stdout.decode("ascii")
 
 
 def test_answers_go_into_the_files_and_are_proved_first() -> None:

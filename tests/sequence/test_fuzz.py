@@ -3,8 +3,8 @@
 import random
 from contextlib import suppress
 from pathlib import Path
+from tempfile import TemporaryDirectory
 
-import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
@@ -52,11 +52,9 @@ def test_mutated_rig_files_end_in_problems_or_a_rig(seed: int) -> None:
 @given(st.binary(max_size=300))
 def test_any_bytes_are_answered(content: bytes) -> None:
     """A file of any bytes at all is answered with problems."""
-    path = Path("fuzz-bytes.toml")
-    with pytest.MonkeyPatch.context() as patch:
-        import io
-
-        patch.setattr("builtins.open", lambda *_args, **_kwargs: io.BytesIO(content))
+    with TemporaryDirectory() as folder:
+        path = Path(folder) / "fuzz.toml"
+        path.write_bytes(content)
         problems, _ = find_problems(str(path))
     assert problems
 

@@ -172,6 +172,14 @@ def test_sweeps_together_are_bounded() -> None:
         parse_sequence(text, "wide.toml")
 
 
+def test_a_flood_of_problems_says_that_there_are_more() -> None:
+    """More problems than anyone reads are counted, not dropped in silence."""
+    with pytest.raises(ProblemsFound) as caught:
+        parse_sequence(changed(("atom ", "".join(f"key{i} = 1\n" for i in range(500)) + "atom ")), "flood.toml")
+    assert len(caught.value.problems) == 201
+    assert caught.value.problems[-1].message == "300 more problems are not listed"
+
+
 def test_windows_line_ends_change_nothing() -> None:
     """The same file with CR LF gives the same sequence and the same places."""
     assert parse_sequence(SMALL.replace("\n", "\r\n"), "small.toml").places == small().places
