@@ -192,10 +192,11 @@ class Dispatcher:
                 self._look_at_head()
                 continue
             self._acknowledge()
-            if self._next < len(self._maker):
+            if self._next >= len(self._maker):
+                if not self._replace_missed():
+                    return states.NIGHT_DONE, None
+            elif not self._fits_the_night():
                 return states.NIGHT_OVER, "the night's window has ended"
-            if not self._replace_missed():
-                return states.NIGHT_DONE, None
 
     def _top_up(self) -> None:
         """Give the rig shots up to its slots."""
@@ -211,6 +212,10 @@ class Dispatcher:
         """Whether there is a next shot, a slot for it, and time in the night's window."""
         if self._hands.stopping() or self._next >= len(self._maker) or len(self._held) >= self._description.slots:
             return False
+        return self._fits_the_night()
+
+    def _fits_the_night(self) -> bool:
+        """Whether the next shot would end within the night's window."""
         settle_s = self._maker.settle_s(self._next, unsure=self._unsure)
         return self._start_us() + _us(self._maker.length_s(self._next, settle_s)) <= self._window_end_us()
 
