@@ -1,6 +1,6 @@
 """The logbook: open it, book a night, ask what is in it. For driving a rig see driving.py."""
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass
 from types import TracebackType
@@ -21,6 +21,7 @@ if TYPE_CHECKING:
     from planner.logbook.driving import Driving
     from planner.logbook.night_columns import Columns
     from planner.logbook.plans import NightPlan
+    from planner.logbook.recording import HandEnd
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -206,6 +207,11 @@ class Logbook:
         with self.reading() as connection:
             return [dict(row._mapping) for row in connection.execute(question)]
 
+    def reading_units(self, night_id: int) -> dict[str, str]:
+        """Units of the rig's readings, as the rig last described them in this night."""
+        met = [line["detail"] for line in self.audit(night_id) if line["what"] in ("rig_met", "night_recorded")]
+        return {name: str(unit) for detail in met for name, unit in detail.get("readings", {}).items()}
+
     # ---- in rooms of their own
 
     def book_night(self, new: "NewNight", *, now_us: int, who: str) -> NightRow:
@@ -214,6 +220,16 @@ class Logbook:
 
         with self.writing() as connection:
             night_id = store_night(connection, new, now_us=now_us, who=who)
+        return self.night(night_id)
+
+    def record_night(
+        self, new: "NewNight", ends: "Sequence[HandEnd]", *, readings: Mapping[str, str], now_us: int, who: str
+    ) -> NightRow:
+        """Store a night whose results were written down by hand, one end a position, in one transaction."""
+        from planner.logbook.recording import store_record
+
+        with self.writing() as connection:
+            night_id = store_record(connection, new, ends, readings=readings, now_us=now_us, who=who)
         return self.night(night_id)
 
     def end_night(self, night_id: int, *, now_us: int, who: str, why: str) -> None:

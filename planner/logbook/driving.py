@@ -71,6 +71,13 @@ class Outcome:
     data_reference: str | None = None
 
 
+def result_row(attempt_id: int, outcome: Outcome) -> dict[str, Any]:
+    """The row of the results table."""
+    row = {name: getattr(outcome, name) for name in Outcome.__dataclass_fields__}
+    row |= {"attempt_id": attempt_id, "applied": dict(outcome.applied), "readings": dict(outcome.readings)}
+    return {**row, "flags": list(outcome.flags)}
+
+
 class Step:
     """What may be written within one transaction of a driver."""
 
@@ -137,9 +144,7 @@ class Step:
             raise LogbookConflict(f"{state} is no end of an attempt")
         self._move(attempt_id, state, {"ordinal": ordinal, "why": why, "ended_us": self._now_us})
         if outcome is not None:
-            row = {name: getattr(outcome, name) for name in Outcome.__dataclass_fields__}
-            row |= {"attempt_id": attempt_id, "applied": dict(outcome.applied), "readings": dict(outcome.readings)}
-            self._connection.execute(insert(Result), {**row, "flags": list(outcome.flags)})
+            self._connection.execute(insert(Result), result_row(attempt_id, outcome))
 
     def _move(self, attempt_id: int, state: str, values: dict[str, Any]) -> None:
         changed = self._connection.execute(

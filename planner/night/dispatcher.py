@@ -151,6 +151,7 @@ class Dispatcher:
                     "boot": self._boot,
                     "description": self._description.description,
                     "epoch": self._driving.epoch,
+                    "readings": self._description.readings,
                 },
             )
         self._reconcile()
