@@ -106,7 +106,6 @@ class Host:
             self._check_content(intent)
             if (why := self._not_ready()) is not None:
                 raise RigNotNow(why, retry_after_s=RETRY_NOT_READY_S)
-            self._expire()
             if len(self._queue) + (self._running is not None) >= self._description.slots:
                 raise RigNotNow(f"all {self._description.slots} slots are taken", retry_after_s=RETRY_FULL_S, full=True)
             self._accept(key, intent)
@@ -193,8 +192,7 @@ class Host:
     def take_due(self) -> Shot | None:
         """Real clocks: mark the shot that is due as started, in the journal too, and hand it out to be played."""
         with self._lock:
-            self._expire()
-            return self._start()
+            return self._turn(None)
 
     def seconds_to_event(self) -> float | None:
         """Real clocks: how long until something is due by the clock alone; None when nothing is."""
@@ -202,12 +200,12 @@ class Host:
             event = self._next_event()
             return None if event is None else (event - self.clock.instant().utc) / timedelta(seconds=1)
 
-    def finish(self, key: str, outcome: Outcome) -> None:
-        """Real clocks: the shot handed out by `take_due` is over."""
+    def finish(self, key: str, outcome: Outcome, *, more: bool = True) -> Shot | None:
+        """Real clocks: the shot handed out is over; with `more`, hands out the next one if it is due."""
         with self._lock:
             record = self._records[key]
             record.outcome = outcome
-            self._end(record)
+            return self._turn(record, more=more)
 
     def close(self) -> None:
         """Wake everyone who waits and close the journal; what waits in the queue never runs."""
@@ -303,25 +301,33 @@ class Host:
             started=instant.utc,
         )
 
-    def _end(self, record: Record) -> None:
-        """Give a running shot its one terminal record."""
-        record.end_as_played(self.clock.instant())
-        self._running = None
-        self._note("end", key=record.key, ordinal=record.ordinal, report=record.report().document())
-        self._flushed()  # where the disk refuses, the rig starts nothing more, but what was measured is still told
-        self._tell()
+    def _turn(self, over: Record | None, *, more: bool = True) -> Shot | None:
+        """End the shot that is over and those that are late, start the next one, then tell: in this order.
 
-    def _expire(self) -> None:
+        All lines of a turn reach the disk together, before anyone is told. Where the disk refuses, nothing starts any
+        more, but what was measured is still told.
+        """
+        ended = [] if over is None else [over]
+        if over is not None:
+            over.end_as_played(self.clock.instant())
+            self._running = None
+        ended += self._expire()
+        for record in ended:
+            self._note("end", key=record.key, ordinal=record.ordinal, report=record.report().document())
+        shot = self._start() if more else None
+        if ended:
+            self._flushed()
+            self._tell()
+        return shot
+
+    def _expire(self) -> list[Record]:
         """End waiting shots whose latest start has passed: they never fire."""
         instant = self.clock.instant()
         late = [record for record in self._queue if record.is_late(instant.utc)]
         for record in late:
             self._queue.remove(record)
             record.end("failed", instant, "too late: start_by passed before its turn came")
-            self._note("end", key=record.key, ordinal=record.ordinal, report=record.report().document())
-        if late:
-            self._flushed()
-            self._tell()
+        return late
 
     # ---- simulated time
 
@@ -346,11 +352,10 @@ class Host:
         """Simulated clocks: everything that is due at this very moment, ends before starts before expiries."""
         if not isinstance(self.clock, SimulatedClock):
             return
-        end = None if self._running is None else self._running.planned_end()
-        if self._running is not None and end is not None and end <= self.clock.instant().utc:
-            self._end(self._running)
-        self._expire()
-        if (shot := self._start()) is not None:
+        running = self._running
+        end = None if running is None else running.planned_end()
+        is_over = end is not None and end <= self.clock.instant().utc
+        if (shot := self._turn(running if is_over else None)) is not None:
             self._records[shot.key].outcome = play(self._adapter, shot)
 
     # ---- records

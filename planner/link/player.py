@@ -20,9 +20,9 @@ class Player(threading.Thread):
     def run(self) -> None:
         while not self._stopping:
             shot = self._host.take_due()
-            if shot is not None:
-                self._host.finish(shot.key, play(self._adapter, shot))
-                continue
+            while shot is not None:
+                outcome = play(self._adapter, shot)
+                shot = self._host.finish(shot.key, outcome, more=not self._stopping)
             with self._host.changed:
                 pause_s = self._host.seconds_to_event()
                 if not self._stopping and (pause_s is None or pause_s > 0):

@@ -50,9 +50,11 @@ def running(journal: Path, **options: object) -> Iterator[Server]:
     try:
         yield server
     finally:
-        if server.process.poll() is None:
-            server.process.kill()
-            server.process.communicate(timeout=END_WITHIN_S)
+        server.process.kill()  # which is nothing once it has ended
+        server.process.wait(END_WITHIN_S)
+        for pipe in (server.process.stdin, server.process.stdout, server.process.stderr):
+            if pipe is not None:
+                pipe.close()
 
 
 @pytest.mark.parametrize("how", ["stdin", "SIGTERM", "SIGINT"])
