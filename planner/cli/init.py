@@ -1,5 +1,6 @@
 """`nightfringe init`: the first files."""
 
+import json
 import sys
 from collections.abc import Callable
 from pathlib import Path
@@ -16,7 +17,8 @@ if TYPE_CHECKING:
 @click.command()
 @click.argument("folder", type=click.Path(file_okay=False), default=".")
 @click.option("--yes", is_flag=True, help="ask nothing, take the suggestions")
-def command(folder: str, yes: bool) -> None:
+@click.option("--json", "as_json", is_flag=True, help="ask nothing, print one JSON object")
+def command(folder: str, yes: bool, as_json: bool) -> None:
     """Write a commented starter sequence and rig file.
 
     Asks a few questions at a terminal; elsewhere, or with --yes, the suggestions are taken. Writes sequence.toml and
@@ -28,7 +30,7 @@ def command(folder: str, yes: bool) -> None:
     there = [str(path) for path in targets if path.exists()]
     if there:
         raise InputError(f"{' and '.join(there)} exists already, and init never overwrites; name another folder")
-    answers = Answers() if yes or not sys.stdin.isatty() else _ask()
+    answers = Answers() if yes or as_json or not sys.stdin.isatty() else _ask()
     texts = [starter_rig(answers), starter_sequence(answers, "rig.toml")]
     _prove(*texts)
     try:
@@ -38,6 +40,9 @@ def command(folder: str, yes: bool) -> None:
                 handle.write(text)
     except OSError as wrong:
         raise InputError(f"cannot write into {folder}: {wrong.strerror}") from wrong
+    if as_json:
+        click.echo(json.dumps({"written": [str(path) for path in targets]}))
+        return
     for path in targets:
         click.echo(f"written: {path}")
     click.echo(f"next: set the limits in {targets[0]}, then  nightfringe check {targets[1]}")

@@ -47,6 +47,7 @@ BELIEFS = {  # key in the file -> (field of Expected, unit, highest)
     "excess_noise": ("excess_noise", "1", INFINITE),
 }
 NEEDS_WANTED = ("signal", "budget")
+NEEDS_DETAILS = {"revival": ("period", "depth"), "ladder": ("risk",)}  # without these the goal is no question
 
 
 def read_goal(node: Node | None, switches: dict[str, Switch]) -> GoalSpec | None:
@@ -58,8 +59,13 @@ def read_goal(node: Node | None, switches: dict[str, Switch]) -> GoalSpec | None
     wanted = _wanted(wanted_node, switches) if wanted_node else ()
     if kind in NEEDS_WANTED and not wanted_node:
         fields.problem(f'"wanted" is missing: a goal of kind "{kind}" needs the switches that carry the signal')
+    details_node = fields.get("details")
+    given = details_node.value if details_node and isinstance(details_node.value, dict) else {}
+    for key in NEEDS_DETAILS.get(kind, ()):
+        if key not in given:
+            fields.problem(f'"details" lacks "{key}": a goal of kind "{kind}" needs it', f"details = {{ {key} = ... }}")
     target, target_unit = _target(target_node) if target_node else (None, "")
-    details = _details(fields.get("details"))
+    details = _details(details_node)
     hours = _hours(fields.get("hours"))
     if kind is None:
         return None

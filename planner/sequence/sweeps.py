@@ -62,7 +62,20 @@ def _joined(
             )
             continue
         groups[leader][name] = columns[name]
+    for name, values in groups.items():
+        _refuse_twins(named[name], list(zip(*values.values(), strict=True)))
     return tuple(Sweep(values=values) for values in groups.values())
+
+
+def _refuse_twins(node: Node, points: list[tuple[float, ...]]) -> None:
+    """The same point twice in one sweep would be two cells that are one."""
+    seen: set[tuple[float, ...]] = set()
+    for number, point in enumerate(points):
+        if point in seen:
+            written = node if isinstance(node.value, list) else node.child("values", None)
+            written.child(number, None).problem("this value stands twice", "more shots at one value are repeats")
+            return
+        seen.add(point)
 
 
 def _sweep(node: Node, setting: Setting) -> tuple[tuple[float, ...] | None, Node | None]:
@@ -106,8 +119,6 @@ def _listed(node: Node, setting: Setting) -> tuple[float, ...] | None:
             continue
         if not _inside((value,), setting):
             child.problem(f'{show(child.value)} is outside the range of "{setting.name}"', _range_text(setting))
-        elif value in values[-1:]:
-            child.problem(f"{show(child.value)} stands twice", "more shots at one value are repeats")
         else:
             values.append(value)
     return tuple(values) if len(values) == len(children) else None

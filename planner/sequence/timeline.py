@@ -18,7 +18,7 @@ from planner.quantities import unit
 from planner.sequence.expression import Expression
 from planner.sequence.model import Line, Rig, Stage
 
-FAR = 2**62  # ticks; lengths beyond it cannot be counted
+FAR = 2**53  # ticks; longer lengths are no whole numbers as floats, and a few hundred of them would overflow
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -138,7 +138,7 @@ def value_of(expression: Expression, columns: Mapping[str, FloatArray], count: i
 
 
 def to_ticks(seconds: FloatArray, tick_s: float) -> IntArray:
-    """Nearest whole ticks; what is not finite or beyond 2^62 becomes -1, which the checks refuse."""
+    """Nearest whole ticks; what is not finite or beyond 2^53 becomes -1, which the checks refuse."""
     ticks = np.rint(seconds / tick_s)
     return np.where(np.isfinite(ticks) & (np.abs(ticks) < FAR), ticks, -1.0).astype(np.int64)
 

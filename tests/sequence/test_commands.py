@@ -132,7 +132,9 @@ def test_init_writes_files_that_check_accepts_and_never_overwrites(
     tmp_path: Path, capsys: pytest.CaptureFixture[str]
 ) -> None:
     """A fresh pair is right as written; a second init refuses and changes nothing."""
-    assert run(["init", str(tmp_path), "--yes"]) == 0
+    assert run(["init", str(tmp_path), "--json"]) == 0
+    written = json.loads(capsys.readouterr().out)["written"]
+    assert [Path(name).name for name in written] == ["rig.toml", "sequence.toml"]
     assert run(["check", str(tmp_path / "sequence.toml")]) == 0
     assert run(["check", str(tmp_path / "rig.toml")]) == 0
     (tmp_path / "rig.toml").unlink()

@@ -137,6 +137,11 @@ def test_sweeps_cross_and_move_together() -> None:
     assert len(set(zip(crossed.hold_s, crossed.settings["depth"], strict=True))) == 6
     together = compiled(("[fringe]", 'depth = { values = [5, 10, 20], with = "hold" }\n[fringe]')).table
     assert set(zip(together.hold_s, together.settings["depth"], strict=True)) == {(1.0, 5.0), (2.0, 10.0), (5.0, 20.0)}
+    # one hold at two depths is two points, not a value that stands twice
+    twice = compiled(
+        ("[1, 2, 5]", "[1, 1, 5]"), ("[fringe]", 'depth = { values = [5, 10, 20], with = "hold" }\n[fringe]')
+    )
+    assert len(twice.table) == len(together)
 
 
 @pytest.mark.parametrize(
