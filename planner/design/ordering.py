@@ -1,0 +1,238 @@
+"""A running order that is random and good: packets spread over the night, arranged so that drift can hardly reach them.
+
+Four steps, each with its own stream of random numbers from one seed:
+
+1. packets in a random order that spreads every point over the night (packets.py); with a slow switch, whole dwells;
+2. for each make-up of packets, the pool of arrangements that walks of drift reach least (arrangements.py);
+3. for each packet the arrangement of the pool that lets rhythms cancel over the night (choosing.py);
+4. the wanted switch flipped by a draw from all flips that keep every figure under its bar (restricted.py).
+
+Times are the rig's: a quarter-second hold and a minute's hold make shot number and time very different things.
+"""
+
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass
+from typing import Any, Literal
+
+import numpy as np
+
+from planner.arrays import BoolArray, FloatArray, IntArray
+from planner.design import flips
+from planner.design.arrangements import Patterns, Score, best_arrangements, patterns_of
+from planner.design.choosing import Shape, choose, limits_for
+from planner.design.clock import settle_waits, starts
+from planner.design.drift import Drifts, drifts_of, period_grid
+from planner.design.layout import Layout, lay_out
+from planner.design.packets import Packets, find_packets
+from planner.design.quality import Quality, assess
+from planner.design.restricted import RestrictedSet
+from planner.design.running_order import Kind, RunningOrder
+from planner.sequence.model import Sequence
+from planner.sequence.table import ShotTable
+
+Effort = Literal["quick", "full"]
+PASSES = {"quick": 0, "full": 2}
+Progress = Callable[[str, float], None]
+
+
+@dataclass(frozen=True, kw_only=True)
+class Draft:
+    """An order before its last draw: what `make_order` and the randomisation test both start from.
+
+    choice (n_packet,): each packet's arrangement, (size,) each, in running order; shapes by number.
+    """
+
+    table: ShotTable
+    sequence: Sequence
+    packets: Packets
+    layout: Layout
+    shapes: Mapping[int, Shape]
+    arrangement: list[IntArray]
+    start_s: FloatArray  # (n_packet,) first measured shot's cycle start
+    drifts: Drifts
+    total_s: float
+
+
+def make_order(
+    table: ShotTable, sequence: Sequence, *, seed: int, effort: Effort = "full", progress: Progress | None = None
+) -> RunningOrder:
+    """Order the shots of a table; the same table, sequence, seed and effort give the same order.
+
+    effort "quick" leaves out step 3. progress(step, fraction) is called now and then.
+
+    Raises:
+        PlanImpossible: a dwell longer than the measurement, an empty table.
+    """
+    draft = draft_order(table, sequence, seed=seed, effort=effort, progress=progress)
+    if progress is not None:
+        progress("drawing the flips of the wanted switch", 0.0)
+    allowed = flips.restricted_set(draft, seed=seed)
+    rng = np.random.default_rng(np.random.SeedSequence(seed, spawn_key=(4,)))
+    signs = allowed.draw(1, rng)[0] if allowed is not None else np.ones(flips.units_of(draft).count)
+    return assemble(draft, signs, seed=seed, allowed=allowed)
+
+
+def draft_order(
+    table: ShotTable, sequence: Sequence, *, seed: int, effort: Effort = "full", progress: Progress | None = None
+) -> Draft:
+    """Steps 1 to 3: everything but the flips of the wanted switch."""
+    streams = [np.random.default_rng(np.random.SeedSequence(seed, spawn_key=(k,))) for k in range(4)]
+    packets = find_packets(table, sequence)
+    layout = lay_out(packets, table, sequence, streams[0])
+    wanted = flips.flipping_switch(sequence)
+    total = float(table.duration_s.sum())
+    drifts = drifts_of(sequence, total)
+    omega = np.union1d(drifts.additive.omega, drifts.coupled.omega)
+    shapes = {
+        int(number): _shape(table, sequence, packets, int(number), wanted, drifts, omega, streams[1])
+        for number in np.unique(packets.shape)
+    }
+    ordered = layout.packet
+    start = layout.start_s
+    if effort == "quick" or PASSES[effort] == 0:
+        choice = np.array([streams[2].integers(len(shapes[int(s)].pool)) for s in packets.shape[ordered]])
+    else:
+        grid = period_grid(total)
+        n_band = limits_for(len(ordered), max(len(one.patterns.importance) for one in shapes.values()))[1]
+        count = min(n_band, len(grid))
+        picked = ((np.arange(count) + streams[2].random(count)) * (len(grid) / count)).astype(int)
+        choice = choose(
+            shapes=shapes,
+            shape=packets.shape[ordered],
+            point=packets.point[ordered],
+            start_s=start,
+            slow_sign=slow_signs(table, sequence, packets.first[ordered]),
+            omega=omega,
+            band=2 * np.pi * grid[np.minimum(picked, len(grid) - 1)],
+            rng=streams[3],
+            passes=PASSES[effort],
+            progress=None if progress is None else lambda done: progress("letting rhythms cancel", done),
+        )
+    arrangement = [shapes[int(s)].pool[c] for s, c in zip(packets.shape[ordered], choice, strict=True)]
+    return Draft(
+        table=table,
+        sequence=sequence,
+        packets=packets,
+        layout=layout,
+        shapes=shapes,
+        arrangement=arrangement,
+        start_s=start,
+        drifts=drifts,
+        total_s=total,
+    )
+
+
+def slow_signs(table: ShotTable, sequence: Sequence, rows: IntArray) -> FloatArray:
+    """Product of the slow switches of each subset at some rows: (n_row, 2^slow), the empty subset first."""
+    signs = np.ones((len(rows), 1))
+    for name, switch in sequence.switches.items():
+        if switch.slow:
+            signs = np.concatenate([signs, signs * table.switches[name][rows].astype(np.float64)[:, None]], axis=1)
+    return signs
+
+
+def _shape(
+    table: ShotTable,
+    sequence: Sequence,
+    packets: Packets,
+    number: int,
+    wanted: str | None,
+    drifts: Drifts,
+    omega: FloatArray,
+    rng: np.random.Generator,
+) -> Shape:
+    first = int(packets.shape_rows[number])
+    one = int(np.flatnonzero(packets.first == first)[0])
+    rows = slice(first, first + int(packets.size[one]))
+    fast = {
+        name: table.switches[name][rows].astype(np.float64)
+        for name, switch in sequence.switches.items()
+        if not switch.slow
+    }
+    slow = sum(switch.slow for switch in sequence.switches.values())
+    patterns = patterns_of(table.phase_rad[rows], fast, slow, wanted)
+    power = _powers(patterns, drifts, omega)
+    rates = np.where(patterns.coupled, drifts.coupled.rate, drifts.additive.rate)
+    score = Score(patterns, cycle_s=float(packets.cycle_s[one]), rates=rates, omega=omega, power=power)
+    size, _ = limits_for(len(packets), len(patterns.importance))
+    pool, scores = best_arrangements(score, int(packets.size[one]), size, rng)
+    return Shape(patterns=patterns, pool=pool, scores=scores, cycle_s=float(packets.cycle_s[one]), power=power)
+
+
+def _powers(patterns: Patterns, drifts: Drifts, omega: FloatArray) -> FloatArray:
+    """Squared amplitudes of the declared rhythms for each pattern, (n_pattern, n_period)."""
+
+    def on_grid(prior_omega: FloatArray, power: FloatArray) -> FloatArray:
+        out = np.zeros(len(omega))
+        out[np.searchsorted(omega, prior_omega)] = power
+        return out
+
+    additive = on_grid(drifts.additive.omega, drifts.additive.power)
+    coupled = on_grid(drifts.coupled.omega, drifts.coupled.power)
+    return np.asarray(np.where(patterns.coupled[:, None], coupled, additive))
+
+
+def assemble(draft: Draft, signs: FloatArray, *, seed: int, allowed: RestrictedSet | None) -> RunningOrder:
+    """The running order of a draft with its units flipped by signs (n_unit,)."""
+    table, sequence, layout = draft.table, draft.sequence, draft.layout
+    units = flips.units_of(draft)
+    rows, sign = flips.flipped_rows(draft, units, signs)
+    sizes = draft.packets.size[layout.packet]
+    packet = np.repeat(np.arange(len(sizes)), sizes)
+    first_of_packet = np.cumsum(sizes) - sizes
+    extra = layout.extra
+    at = first_of_packet[extra.before_packet] if len(extra.row) else np.zeros(0, dtype=np.int64)
+    everything = np.insert(rows, at, extra.row)
+    kind = np.insert(np.full(len(rows), int(Kind.MEASURE)), at, extra.kind)
+    boundary = np.insert(_boundaries(layout, first_of_packet, len(rows)), at, extra.boundary)
+    settle = settle_waits(table, sequence, everything, boundary)
+    duration = table.duration_s[everything]
+    start = starts(duration, settle)
+    return RunningOrder(
+        request=np.zeros(len(everything), dtype=np.int64),
+        shot=everything,
+        kind=kind,
+        start_s=start,
+        settle_s=settle,
+        duration_s=duration,
+        packet=np.insert(packet, at, -1),
+        unit=np.insert(units.of_packet[packet], at, -1),
+        flip=np.insert(sign, at, 1).astype(np.int8),
+        seed=seed,
+        figures=judge(table, sequence, everything, start + settle + duration / 2, kind, draft.drifts).figures(),
+        notes=_notes(allowed, units),
+    )
+
+
+def _boundaries(layout: Layout, first_of_packet: IntArray, n: int) -> BoolArray:
+    boundary = np.zeros(n, dtype=np.bool_)
+    opens = np.flatnonzero(np.diff(layout.dwell, prepend=-1))
+    boundary[first_of_packet[opens]] = ~layout.opened_by_extra[opens]
+    return boundary
+
+
+def _notes(allowed: RestrictedSet | None, units: "flips.Units") -> dict[str, Any]:
+    notes: dict[str, Any] = {"flipped_switch": units.switch, "units": units.count}
+    if allowed is not None:
+        notes["log2_members"] = round(allowed.log2_size, 2)
+        notes["bars"] = {name: float(value) for name, value in vars(allowed.bars).items()}
+    return notes
+
+
+def judge(
+    table: ShotTable, sequence: Sequence, rows: IntArray, mid_s: FloatArray, kind: IntArray, drifts: Drifts
+) -> Quality:
+    """The quality of the measured shots of an order; rows, mid_s, kind of shape (n_position,)."""
+    measured = kind == int(Kind.MEASURE)
+    mine = rows[measured]
+    packets = find_packets(table, sequence)
+    point_of_row = np.repeat(packets.point, packets.size)
+    return assess(
+        mid_s=mid_s[measured],
+        total_s=float(mid_s[-1] + table.duration_s[rows[-1]] / 2),
+        point=point_of_row[mine],
+        phase_rad=table.phase_rad[mine],
+        switches={name: states[mine] for name, states in table.switches.items()},
+        drifts=drifts,
+        most_frequencies=4000 if len(mine) < 30_000 else 400,
+    )
