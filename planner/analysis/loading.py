@@ -5,8 +5,10 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.polynomial import legendre
 from scipy import special
+from scipy.optimize import nnls
 
 from planner.analysis.decay import Decay, as_times, need_two_holds, search_limits
+from planner.analysis.fringe import group_sums
 from planner.analysis.shapes import EXPONENTIAL
 from planner.arrays import FloatArray, IntArray
 from planner.errors import NotEnoughData
@@ -15,6 +17,7 @@ MOST_DRIFT_TERMS = 8
 PACKETS_PER_TERM = 8  # a drift term needs this many packets, or it would follow the holds instead of the loading
 # Huber's constant: packets within 1.5 standard deviations count fully; 96 % efficient on Gaussian scatter.
 HUBER = 1.5
+HUBER_SQUARE = 0.7785  # mean square of Gaussian scatter held back so (computed)
 PASSES = 12
 LEAST_SPREAD = 1e-9  # relative; far below one atom in any cloud, so that data made without noise stay finite
 
@@ -28,7 +31,7 @@ class HoldAtoms:
     log_atoms: FloatArray
     covariance: FloatArray  # (n_hold, n_hold) of log_atoms
     freedom: int  # degrees of freedom of the packet scatter behind the covariance
-    packet_scatter: float  # standard deviation of a packet's mean atom number, relative
+    packet_scatter: FloatArray  # standard deviation of a packet's mean atom number, relative
     drift_terms: int
     held_back: int  # packets that lie so far off that they count less (they are not left out)
 
@@ -87,44 +90,71 @@ def atoms_per_hold(
     y = np.log(mean)
     levels = np.zeros((count, size))
     levels[np.arange(count), hold] = 1
-    tried = []
-    for terms in range(1 + max(0, min(MOST_DRIFT_TERMS, (count - size) // PACKETS_PER_TERM))):
-        design = np.hstack([levels, legendre.legvander(x, terms)[:, 1:]])
-        solution, weight = _huber(design, y, count - size - terms)
-        spread = np.sqrt((weight * (y - design @ solution) ** 2).sum() / count)
-        criterion = 2 * count * np.log(max(spread, LEAST_SPREAD)) + (size + terms) * np.log(count)
-        tried.append((criterion, terms, design, solution, weight))
-    _, terms, design, solution, weight = min(tried, key=lambda entry: entry[0])
-    freedom = count - size - terms
-    residual = y - design @ solution
-    # Huber's asymptotic covariance
-    scale = float(np.sqrt((weight**2 * residual**2).sum() / freedom) / np.mean(weight >= 1))
-    scale = max(scale, LEAST_SPREAD)
-    covariance = scale**2 * np.linalg.pinv(design.T @ design)
+    fits = [
+        _robust_fit(np.hstack([levels, legendre.legvander(x, terms)[:, 1:]]), y, hold, terms)
+        for terms in range(1 + max(0, min(MOST_DRIFT_TERMS, (count - size) // PACKETS_PER_TERM)))
+    ]
+    best = min(fits, key=lambda fit: fit.criterion)
     return HoldAtoms(
         hold_s=hold_s,
         packets=np.bincount(hold, minlength=size),
-        log_atoms=solution[:size],
-        covariance=covariance[:size, :size],
-        freedom=freedom,
-        packet_scatter=scale,
-        drift_terms=terms,
-        held_back=int((weight < 0.5).sum()),
+        log_atoms=best.solution[:size],
+        covariance=best.covariance[:size, :size],
+        freedom=count - size - best.terms,
+        packet_scatter=np.array([best.sd[hold == h].mean() for h in range(size)]),
+        drift_terms=best.terms,
+        held_back=int((best.weight < 0.5).sum()),
     )
 
 
-def _huber(design: FloatArray, y: FloatArray, freedom: int) -> tuple[FloatArray, FloatArray]:
-    """Least squares with Huber's weights, (n_column,) and (n,); the scale from the median absolute residual."""
-    weight: FloatArray = np.ones(len(y))
-    solution: FloatArray = np.zeros(design.shape[1])
+@dataclass(frozen=True, kw_only=True)
+class _Fit:
+    terms: int
+    solution: FloatArray  # (n_column,)
+    covariance: FloatArray  # (n_column, n_column)
+    weight: FloatArray  # (n_packet,) Huber's
+    sd: FloatArray  # (n_packet,)
+    criterion: float  # Schwarz
+
+
+def _robust_fit(design: FloatArray, y: FloatArray, hold: IntArray, terms: int) -> _Fit:
+    """Least squares with Huber's weights and a scatter that depends on the hold's atom number.
+
+    The relative variance of a packet's mean is a + b/N + c/N^2 with none negative: fluctuations of the load, counting,
+    detection. Few atoms at long holds scatter more, and long holds carry the lifetime.
+    """
+    count, columns = design.shape
+    freedom = count - columns
+    size = columns - terms
+    counts = np.bincount(hold, minlength=size)
+    solution = np.linalg.lstsq(design, y, rcond=None)[0]
+    # 1.4826 makes the median absolute deviation the standard deviation of Gaussian scatter
+    spread = 1.4826 * float(np.median(np.abs(y - design @ solution))) * np.sqrt(count / freedom)
+    sd = np.full(count, max(spread, LEAST_SPREAD))
+    weight = np.ones(count)
     for _ in range(PASSES):
-        root = np.sqrt(weight)
-        solution = np.asarray(np.linalg.lstsq(design * root[:, None], y * root, rcond=None)[0])
-        size = np.abs(y - design @ solution)
-        # 1.4826 makes the median absolute deviation the standard deviation of Gaussian scatter
-        scale = 1.4826 * float(np.median(size)) * np.sqrt(len(y) / freedom)
-        weight = np.minimum(1.0, HUBER * scale / np.maximum(size, LEAST_SPREAD)) if scale > LEAST_SPREAD else weight
-    return solution, weight
+        residual = y - design @ solution
+        weight = np.minimum(1.0, HUBER * sd / np.maximum(np.abs(residual), LEAST_SPREAD))
+        squares = group_sums(hold, (weight * residual) ** 2, size) / HUBER_SQUARE / counts * (count / freedom)
+        relative = np.exp(solution[:size].max() - solution[:size])
+        basis = np.stack([np.ones(size), relative, relative**2], axis=1)
+        pull = np.sqrt(counts) / group_sums(hold, sd**2, size) * counts
+        variance = basis @ nnls(basis * pull[:, None], squares * pull)[0]
+        sd = np.sqrt(np.maximum(variance, LEAST_SPREAD**2))[hold]
+        root = np.sqrt(weight) / sd
+        solution = np.linalg.lstsq(design * root[:, None], y * root, rcond=None)[0]
+    standard = weight * (y - design @ solution) / sd
+    # Huber's asymptotic covariance
+    factor = float((standard**2).sum() / freedom / np.mean(weight >= 1) ** 2)
+    scaled = design / sd[:, None]
+    return _Fit(
+        terms=terms,
+        solution=np.asarray(solution),
+        covariance=np.asarray(factor * np.linalg.pinv(scaled.T @ scaled)),
+        weight=weight,
+        sd=sd,
+        criterion=float(2 * np.log(sd).sum() + (standard**2).sum() / HUBER_SQUARE + columns * np.log(count)),
+    )
 
 
 def fit_atom_decay(holds: HoldAtoms, *, level: float = 0.95) -> Decay:
