@@ -106,6 +106,16 @@ def test_distinct_timelines_are_few_and_each_shot_plays_its_own() -> None:
     assert len({made.timelines.digest(i) for i in range(3)}) == 3
 
 
+@pytest.mark.parametrize("path", EXAMPLES, ids=lambda path: path.stem)
+def test_each_shot_plays_a_timeline_of_its_own_settings(path: Path) -> None:
+    """Whatever a timeline depends on has, in every shot that plays it, the value that the shot's row says."""
+    made = compiled_file(path)
+    for name, column in made.timelines.columns.items():
+        np.testing.assert_array_equal(column[made.table.timeline], made.table.settings[name])
+        for check in made.checks.values():
+            np.testing.assert_array_equal(column[check.timeline], check.settings[name])
+
+
 def test_compile_is_deterministic() -> None:
     """The same text gives the same table and the same digests."""
     one, two = compiled(), compiled()

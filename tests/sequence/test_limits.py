@@ -144,6 +144,13 @@ def test_a_single_shot_beyond_the_duty_is_refused_when_compiling() -> None:
         compile_sequence(small(('"500 ms"', '"6 s"')), small_rig())
 
 
+def test_a_single_shot_beyond_the_load_is_refused_when_compiling() -> None:
+    """5 s at 10 Er and two ramps make 50.1 Er s: refused at 50, allowed at 50.2."""
+    compile_sequence(small(), small_rig(('"20000 Er s"', '"50.2 Er s"')))
+    with pytest.raises(ProblemsFound, match=r'one shot loads line "lattice" by 1 of'):
+        compile_sequence(small(), small_rig(('"20000 Er s"', '"50 Er s"')))
+
+
 def test_a_long_ramp_may_cross_rest() -> None:
     """The load of a ramp from -2 to +2 A over 1 s is two triangles of 0.5 s and 2 A: 1 A s, not zero."""
     made = compile_sequence(
