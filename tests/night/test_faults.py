@@ -4,7 +4,6 @@ A script of faults is drawn; at each call to the rig, and at each commit, the ne
 wrong. A crash of the program is an exception that nothing in it catches; the next dispatcher is a new program.
 """
 
-from collections import Counter
 from collections.abc import Iterator
 from contextlib import contextmanager, suppress
 from typing import Any
@@ -14,9 +13,8 @@ from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
 from planner.errors import LinkError, RigMalformed, RigNotNow, RigUnknown, RigUnreachable
-from planner.link.journal import read_journal
-from planner.logbook import states
 from tests.night.conftest import NewBench
+from tests.night.judging import check_night
 from tests.night.nights import Bench
 
 SHOTS = 6
@@ -134,39 +132,6 @@ def run_through(bench: Bench, calls: list[str], commits: list[str]) -> None:
     raise AssertionError(f"the night was not done after {MOST_PROGRAMS} programs; left: {calls} {commits}")
 
 
-def judge(bench: Bench) -> None:
-    """What must hold whatever happened."""
-    starts: Counter[str] = Counter()
-    ended: dict[str, str] = {}
-    for facts in read_journal(bench.folder / "rig.jsonl"):
-        if facts["event"] == "start":
-            starts[facts["key"]] += 1
-        if facts["event"] == "end":
-            assert facts["key"] not in ended
-            ended[facts["key"]] = facts["report"]["state"]
-    assert set(starts.values()) <= {1}  # at most one start per key
-    with bench.book.reading() as connection:
-        rows = connection.exec_driver_sql("SELECT key, state, position, id FROM attempts").all()
-        results = set(connection.exec_driver_sql("SELECT attempt_id FROM results").scalars())
-    states_of = {row[0]: row[1] for row in rows}
-    assert set(starts) <= set(states_of)  # nothing ran that was not on disk before
-    assert set(states_of.values()) <= set(states.ENDS)  # every attempt has its one terminal record
-    for key, state in states_of.items():
-        if state == states.DONE:
-            assert ended.get(key) == "done"
-        if state == states.WITHDRAWN:
-            assert key not in starts  # certain not to have run
-        if key in starts and state not in (states.DONE, states.FAILED):
-            assert state == states.LOST
-    assert {row[3] for row in rows if row[1] == states.DONE} == results
-    columns = bench.columns()
-    done = columns["state"] == "done"
-    missing = set(range(SHOTS)) - set(columns["shot"][done])
-    tried = Counter(columns["shot"][(columns["state"] == "lost") | (columns["state"] == "failed")])
-    assert all(tried[shot] >= 3 for shot in missing)  # every shot was measured, or tried as often as allowed
-    assert len(set(columns["shot"][done])) == int(done.sum())  # and none measured twice
-
-
 @settings(max_examples=25, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture])
 @given(
     calls=st.lists(st.sampled_from(FAULTS), max_size=30),
@@ -176,7 +141,7 @@ def test_nothing_is_lost_or_done_twice(calls: list[str], commits: list[str], new
     """Whatever goes wrong and whenever either side dies: one start a key, one end an attempt, no result missing."""
     bench = new_bench(shots=SHOTS, journal=True, length_s=36000.0)
     run_through(bench, calls, commits)
-    judge(bench)
+    check_night(bench.book, bench.night.id, bench.folder / "rig.jsonl", shots=SHOTS)
     bench.close()
 
 
@@ -186,4 +151,4 @@ def test_one_fault_at_a_time(fault: str, when: int, new_bench: NewBench) -> None
     """Each kind of fault alone, early, in the middle and late: the night goes on by itself or at the next start."""
     bench = new_bench(shots=SHOTS, journal=True, length_s=36000.0)
     run_through(bench, [fault, *["fine"] * when], [])
-    judge(bench)
+    check_night(bench.book, bench.night.id, bench.folder / "rig.jsonl", shots=SHOTS)
