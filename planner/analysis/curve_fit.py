@@ -164,14 +164,14 @@ def profile_interval(
         step = scale[index] * np.sqrt(2 * drop)
         for _ in range(60):
             outside = side * min(side * (outside + side * step), side * limit)
-            fallen, guess = fall(outside, guess)
+            fallen, found = fall(outside, guess)
             if fallen >= drop or outside == limit:
                 break
-            inside, step = outside, step * 1.6
+            inside, guess, step = outside, found, step * 1.6
         if fallen < drop:
             ends.append(limit)
             continue
-        here = guess
+        here = guess  # from the inner side, so that both ends of the bracket are judged as they were above
 
         def beyond(value: float, guess: FloatArray = here) -> float:
             # the root of the fall is close to linear in the parameter, so the root is found in a few steps

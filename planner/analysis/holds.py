@@ -29,6 +29,7 @@ class HoldContrast:
     hold_s: FloatArray
     fringes: IntArray  # packets (or packet parts) with a fringe of their own
     held_back: IntArray  # of these, fringes that scatter far beyond the others and count less
+    unchecked: IntArray  # fringes beside these that lost so many shots that nothing vouches for them: not counted
     power: FloatArray  # sum |q|^2 / (noise variance of a quadrature)
     noise: FloatArray  # variance of a shot over its projection noise, as taken for this hold
     noise_dof: FloatArray  # inf where the noise was assumed
@@ -70,6 +71,9 @@ def combine(fringes: Fringes, which: IntArray, hold_s: FloatArray, *, level: flo
             "no packet has three different readout phases with a usable result: there is no fringe to fit"
         )
     size = len(hold_s)
+    # A packet with no shot to spare cannot be seen to be spoilt; where others can, it does not count.
+    unchecked = fringes.solved & (fringes.dof == 0) & (fringes.dof.max() > 0)
+    fringes = replace(fringes, solved=fringes.solved & ~unchecked)
     label = which[fringes.solved]
     held_back, fringes = _hold_back(fringes, label, size)
     use = fringes.solved
@@ -103,6 +107,7 @@ def combine(fringes: Fringes, which: IntArray, hold_s: FloatArray, *, level: flo
         hold_s=hold_s[kept],
         fringes=count[kept],
         held_back=held_back[kept],
+        unchecked=np.bincount(which[unchecked], minlength=size)[kept],
         power=power,
         noise=noise[kept],
         noise_dof=noise_dof[kept],

@@ -310,6 +310,11 @@ def plain_words(curve: CurveResults) -> list[str]:
             f"{int(curve.contrast.held_back.sum())} fringe(s) scatter far beyond the others and count less in the "
             f"contrast. Without rare bad shots the noise would be {curve.noise.typical:.2f} x shot noise."
         )
+    if curve.contrast is not None and curve.contrast.unchecked.any():
+        words.append(
+            f"{int(curve.contrast.unchecked.sum())} fringe(s) lost too many shots to be checked; "
+            "they count for atoms, not for contrast."
+        )
     if curve.unsolved:
         words.append(
             f"{curve.unsolved} packets kept fewer than three readout phases: they count for atoms, not for contrast."

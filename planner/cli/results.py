@@ -180,7 +180,18 @@ def _curve_document(curve: "CurveResults") -> dict[str, Any]:
         entry: dict[str, Any] = {"hold_s": float(hold), "shots": int(curve.hold_shots[number])}
         at = None if curve.contrast is None else _index(curve.contrast.hold_s, hold)
         if curve.contrast is not None and at is not None:
-            for name in ("fringes", "held_back", "value", "low", "high", "plain", "squared", "p_zero", "noise"):
+            for name in (
+                "fringes",
+                "held_back",
+                "unchecked",
+                "value",
+                "low",
+                "high",
+                "plain",
+                "squared",
+                "p_zero",
+                "noise",
+            ):
                 key = {"value": "contrast", "low": "contrast_low", "high": "contrast_high", "plain": "contrast_plain"}
                 key |= {"squared": "contrast_squared", "noise": "noise_variance_ratio"}
                 entry[key.get(name, name)] = _number(getattr(curve.contrast, name)[at])

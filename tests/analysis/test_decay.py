@@ -156,3 +156,31 @@ def test_results_are_frozen() -> None:
     fit = fit_contrast_decay(hold_contrasts(0.6 * np.exp(-HOLDS / 12.5)))
     with pytest.raises(dataclasses.FrozenInstanceError):
         fit.time_s = 1.0  # type: ignore[misc]
+
+
+def test_a_spoilt_packet_neither_moves_nor_blurs_its_hold() -> None:
+    """One shot that lost its light widens the hold's interval by less than half and is counted as held back."""
+    rng = np.random.default_rng(4)
+    theta, group = np.tile(np.arange(4) * np.pi / 2, 12), np.repeat(np.arange(12), 4)
+    y = 0.5 + 0.2 * np.cos(0.3 + theta) + 0.004 * rng.standard_normal(48)
+    which, variance = np.zeros(12, dtype=int), np.full(48, 0.004**2)
+    clean = combine(fit_fringes(theta, y, variance, group, 12), which, HOLDS[:1])
+    y[17] = 0.02
+    spoilt = combine(fit_fringes(theta, y, variance, group, 12), which, HOLDS[:1])
+    assert spoilt.held_back.tolist() == [1]
+    assert clean.held_back.tolist() == [0]
+    assert spoilt.low[0] < 0.4 < spoilt.high[0]
+    assert spoilt.high[0] - spoilt.low[0] < 1.5 * (clean.high[0] - clean.low[0])
+
+
+def test_a_packet_that_nothing_vouches_for_does_not_count() -> None:
+    """With three shots left a spoilt packet cannot be told, so it is named instead of believed."""
+    theta, group = np.tile(np.arange(4) * np.pi / 2, 12), np.repeat(np.arange(12), 4)
+    y = 0.5 + 0.2 * np.cos(0.3 + theta) + 0.004 * np.random.default_rng(4).standard_normal(48)
+    y[17] = 0.02
+    keep = np.arange(48) != 18
+    fringes = fit_fringes(theta[keep], y[keep], np.full(47, 0.004**2), group[keep], 12)
+    holds = combine(fringes, np.zeros(12, dtype=int), HOLDS[:1])
+    assert holds.unchecked.tolist() == [1]
+    assert holds.fringes.tolist() == [11]
+    assert holds.low[0] < 0.4 < holds.high[0]
