@@ -110,8 +110,8 @@ def rows() -> list[dict[str, Any]]:
         }
 
     return [
-        row(f"95 % interval of coherence time covers, {FULL} nights", found.coherence, 0.94, 0.96),
-        row(f"95 % interval of lifetime covers, {FULL} nights", found.lifetime, 0.94, 0.96),
+        row(f"95 % interval of coherence time covers, {FULL} nights", found.coherence, 0.92, 0.98),
+        row(f"95 % interval of lifetime covers, {FULL} nights", found.lifetime, 0.92, 0.98),
         row("median half width of coherence time, relative", found.coherence_width, 0.0, 0.05, bound),
         row("median half width of lifetime, relative", found.lifetime_width, 0.0, 0.02),
     ]
