@@ -23,18 +23,25 @@ class Recovered:
     last_ordinal: int = 0
     epoch: int = -1
     driver: str = ""
+    earliest: datetime | None = None  # the first boot
     latest: datetime | None = None  # nothing in the journal happened, or was to end, after this
 
 
 class Journal:
-    """An open journal. `write` collects lines, `flush` puts them on disk and returns only then."""
+    """An open journal. `write` collects lines, `flush` puts them on disk and returns only then.
+
+    Raises InputError where `path` cannot be a journal, or is a damaged one.
+    """
 
     def __init__(self, path: Path) -> None:
         self.path = path
-        path.parent.mkdir(parents=True, exist_ok=True)
-        _drop_torn_line(path)
-        self.recovered = _recover(path)
-        self._file = path.open("ab", buffering=0)
+        try:
+            path.parent.mkdir(parents=True, exist_ok=True)
+            _drop_torn_line(path)
+            self.recovered = _recover(path)
+            self._file = path.open("ab", buffering=0)
+        except OSError as error:
+            raise InputError(f"the journal {path} cannot be opened: {error.strerror}") from error
         self._lines: list[bytes] = []
 
     def write(self, event: str, facts: Mapping[str, Any]) -> None:
@@ -86,6 +93,7 @@ def _recover(path: Path) -> Recovered:
     if not path.exists():
         return Recovered()
     last_ordinal, fence = 0, (-1, "")
+    earliest: datetime | None = None
     latest: datetime | None = None
     for facts in read_journal(path):
         try:
@@ -97,5 +105,6 @@ def _recover(path: Path) -> Recovered:
                 at += timedelta(seconds=facts["duration_s"])
         except (KeyError, TypeError, ValueError) as error:
             raise InputError(f"{path}: a line of the journal lacks what it must hold ({error!r})") from error
+        earliest = at if earliest is None else earliest
         latest = at if latest is None else max(latest, at)
-    return Recovered(last_ordinal=last_ordinal, epoch=fence[0], driver=fence[1], latest=latest)
+    return Recovered(last_ordinal=last_ordinal, epoch=fence[0], driver=fence[1], earliest=earliest, latest=latest)

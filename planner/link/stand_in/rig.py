@@ -8,6 +8,8 @@ from datetime import datetime, timedelta
 from typing import Protocol
 
 from planner.link.adapter import Adapter, Capabilities, Result, Shot, ShotFailed
+from planner.link.messages import SettingRange
+from planner.link.stand_in.profile import Profile
 from planner.quantities import from_unit
 
 REMEMBERED = 64  # shots; the load of a shot further back than this has faded in every rig worth standing in for
@@ -57,6 +59,19 @@ class Model(Protocol):
     ) -> ModelOutcome:
         """One shot that starts `start_s` after the origin of the rig's drifts; `history` is oldest first."""
         ...
+
+
+def capabilities_of(profile: Profile) -> Capabilities:
+    """What a rig with this profile says of itself."""
+    return Capabilities(
+        rig=profile.name,
+        settings={
+            name: SettingRange(unit=setting.unit, low=setting.low, high=setting.high)
+            for name, setting in profile.settings.items()
+        },
+        switches=dict(profile.switches),
+        readings={name: reading.unit for name, reading in profile.readings.items()},
+    )
 
 
 class StandInRig(Adapter):
