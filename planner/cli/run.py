@@ -131,6 +131,7 @@ def book_night(
     from planner.night.planning import book_sequence, cautions
     from planner.night.running import now_us, owner_name
 
+    click.echo("putting the shots in order", err=True)
     booked = book_sequence(
         book,
         file,
@@ -157,20 +158,18 @@ def connect(link: str, token_file: str | None) -> "RigClient":
     from pathlib import Path
 
     from planner.link.client import RigClient
+    from planner.link.token import read_token
 
-    token = None
-    if token_file is not None:
-        try:
-            token = Path(token_file).read_text(encoding="ascii").strip()
-        except (OSError, UnicodeDecodeError) as error:
-            raise InputError(f"the token file {token_file} cannot be read: {error}") from error
+    token = None if token_file is None else read_token(Path(token_file))
     if not link:
         raise InputError("the rig file names no link; give the rig's address with --rig URL")
     return RigClient(link, token)
 
 
-def drive(book: "Logbook", row: "NightRow", client: "RigClient", *, end: bool, as_json: bool) -> int:
-    """Run (or end) the night with a live display; returns the exit code."""
+def drive(
+    book: "Logbook", row: "NightRow", client: "RigClient", *, end: bool, as_json: bool, quiet: bool = False
+) -> int:
+    """Run (or end) the night with a live display; returns the exit code. `quiet` prints nothing to standard output."""
     from planner.cli.progress import night_display
     from planner.night.running import end_night, run_night
 
@@ -191,7 +190,7 @@ def drive(book: "Logbook", row: "NightRow", client: "RigClient", *, end: bool, a
     }
     if as_json:
         click.echo(json.dumps(summary))
-    else:
+    elif not quiet:
         ends = ", ".join(f"{count:,} {state}" for state, count in sorted(summary["attempts"].items())) or "none yet"
         click.echo(f"night {after.name} is {after.state}{f' ({after.why})' if after.why else ''}; shots: {ends}")
         if after.state == "stopped":

@@ -1,9 +1,10 @@
 """Booking a night: from a sequence file to a stored order within the rig's limits."""
 
+from collections.abc import Callable
 from dataclasses import dataclass
 from datetime import UTC, datetime
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 from planner.design.running_order import RunningOrder
 from planner.errors import InputError, PlanImpossible
@@ -14,6 +15,9 @@ from planner.sequence.limits import check_order_limits
 from planner.sequence.model import Sequence
 from planner.sequence.reader import read_sequence
 from planner.sequence.rigfile import read_rig, rig_path
+
+if TYPE_CHECKING:
+    from planner.design.ordering import Effort
 
 ROOM = 1.1  # a window is so much longer than its order: settle waits after a break, repeats of missed shots
 SHORT_ROOM_S = 600.0
@@ -40,12 +44,15 @@ def book_sequence(
     hours: float | None = None,
     link: str | None = None,
     unattended: bool = False,
+    effort: "Effort" = "full",
+    progress: Callable[[str, float], None] | None = None,
 ) -> Booked:
     """Read, compile, order, check and store a night of one sequence.
 
     Args:
         hours: length of the night's window; without it, the order's own length and a tenth more.
         link: address of the rig link in place of the rig file's.
+        effort, progress: as make_order takes them.
 
     Raises:
         ProblemsFound: the sequence or rig file has problems, or the order is beyond the rig's limits.
@@ -62,7 +69,7 @@ def book_sequence(
             "the person responsible for the room has given it"
         )
     compiled = compile_sequence(sequence, rig)
-    order = make_order(compiled.table, sequence, seed=seed)
+    order = make_order(compiled.table, sequence, seed=seed, effort=effort, progress=progress)
     check_order_limits(compiled, rig, order.start_s, order.shot, settle_s=order.settle_s)
     order_s = length_of(order)
     window_s = order_s * ROOM + SHORT_ROOM_S if hours is None else hours * 3600.0
