@@ -18,6 +18,7 @@ COMMANDS: dict[str, tuple[str, str]] = {
     "check": ("planner.cli.check", "Find every problem of a sequence or rig file"),
     "compile": ("planner.cli.compile", "Compile a sequence to its shots and timelines"),
     "timeline": ("planner.cli.timeline", "Draw the timeline of one shot"),
+    "rehearse": ("planner.cli.rehearse", "Rehearse a whole night on the stand-in rig"),
     "run": ("planner.cli.run", "Book a night and run it, or go on where one stopped"),
     "rig": ("planner.cli.rig", "Start the stand-in rig, or show what a rig says of itself"),
     "nights": ("planner.cli.nights", "List the nights in the logbook"),
