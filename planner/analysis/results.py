@@ -157,7 +157,13 @@ def measure_noise(fringes: Fringes) -> Noise | None:
 
 
 def _curve(
-    data: NightData, request: int, settings: dict[str, float], shape: Shape, detection: float, level: float
+    data: NightData,
+    request: int,
+    settings: dict[str, float],
+    shape: Shape,
+    compare: bool,
+    detection: float,
+    level: float,
 ) -> CurveResults:
     holds, which = distinct_holds(data.hold_s)
     group, count = fringe_groups(data)
@@ -173,7 +179,7 @@ def _curve(
         cells = fit_fringes(data.phase_rad, y, shot_variance(data, detection_noise_atoms=detection), which, len(holds))
         pooled = cells.contrast_plain
         coherence = fit_contrast_decay(contrast, shape=shape, level=level)
-        if coherence.goodness_p < POOR_FIT:
+        if compare and coherence.goodness_p < POOR_FIT:
             shapes = compare_shapes(contrast)
     except NotEnoughData as error:
         why_no_coherence = str(error)
@@ -219,6 +225,7 @@ def summarise(
     *,
     cut_flags: Sequence[str] = (),
     shape: Shape = EXPONENTIAL,
+    compare: bool = True,
     detection_noise_atoms: float = 0.0,
     level: float = 0.95,
 ) -> NightResults:
@@ -228,6 +235,7 @@ def summarise(
         data: the night.
         cut_flags: flags of the rig that exclude a shot, declared beforehand.
         shape: how contrast falls; atoms always as one exponential.
+        compare: whether to try the other shapes where this one does not describe the contrast (a few seconds).
         detection_noise_atoms: what the detector adds to each output's count, one standard deviation; a weight only.
         level: coverage of the intervals.
 
@@ -247,7 +255,9 @@ def summarise(
         mine = used.rows(used.request == request)
         label, settings = curve_labels(mine, distinct_holds(mine.hold_s)[1])
         for number, values in enumerate(settings):
-            curves.append(_curve(mine.rows(label == number), request, values, shape, detection_noise_atoms, level))
+            curves.append(
+                _curve(mine.rows(label == number), request, values, shape, compare, detection_noise_atoms, level)
+            )
     return NightResults(
         attempts=chosen.total,
         used=len(used),
