@@ -191,7 +191,9 @@ def upgrade() -> None:
             "state IN ('intended', 'sent', 'accepted', 'running', 'done', 'failed', 'withdrawn', 'lost')",
             name=op.f("ck_attempts_state"),
         ),
-        sa.CheckConstraint("position >= 0 AND try_number >= 1 AND revision >= 1 AND settle_s >= 0", name=op.f("ck_attempts_numbers")),
+        sa.CheckConstraint(
+            "position >= 0 AND try_number >= 1 AND revision >= 1 AND settle_s >= 0", name=op.f("ck_attempts_numbers")
+        ),
         sa.ForeignKeyConstraint(["night_id"], ["nights.id"], name=op.f("fk_attempts_night_id")),
         sa.ForeignKeyConstraint(["request_id"], ["requests.id"], name=op.f("fk_attempts_request_id")),
         sa.PrimaryKeyConstraint("id", name=op.f("pk_attempts")),
@@ -204,7 +206,7 @@ def upgrade() -> None:
     op.create_index(
         "ix_attempts_open",
         "attempts",
-        ["night_id"],
+        ["night_id", "position", "try_number"],
         unique=False,
         sqlite_where=sa.text("state IN ('intended', 'sent', 'accepted', 'running')"),
         postgresql_where=sa.text("state IN ('intended', 'sent', 'accepted', 'running')"),

@@ -200,6 +200,8 @@ class Attempt(Base):
         Index(
             "ix_attempts_open",
             "night_id",
+            "position",
+            "try_number",  # with its order in the index, SQLite prefers it to the unique one of the whole table
             sqlite_where=OPEN_ATTEMPTS,
             postgresql_where=OPEN_ATTEMPTS,
         ),

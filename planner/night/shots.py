@@ -38,6 +38,8 @@ class ShotMaker:
         for request in plan.requests:
             _check_switches(request, description)
         self._check_limits()
+        busy_s = self._order["duration_s"] + self._order["settle_s"]
+        self._remaining_s = np.cumsum(busy_s[::-1])[::-1]
 
     def __len__(self) -> int:
         return len(self._plan.order)
@@ -64,7 +66,7 @@ class ShotMaker:
 
     def remaining_s(self, position: int) -> float:
         """Planned time of the order from `position` on, waits between shots left out."""
-        return float(np.sum(self._order["duration_s"][position:]) + np.sum(self._order["settle_s"][position:]))
+        return float(self._remaining_s[position]) if position < len(self) else 0.0
 
     def states(self, position: int) -> dict[str, str]:
         """The switch states of a position."""
