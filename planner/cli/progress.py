@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING, Protocol
 
 if TYPE_CHECKING:
     from planner.logbook import NightRow
-    from planner.night.dispatcher import Progress as HowFar
+    from planner.night.held import Progress as HowFar
 
 LINES = 20  # plain lines a night where there is no terminal
 

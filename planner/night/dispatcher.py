@@ -10,9 +10,6 @@ Whatever happens to either side, nothing is assumed about a shot that was sent: 
 import contextlib
 from collections import deque
 from collections.abc import Callable
-from dataclasses import dataclass
-
-import numpy as np
 
 from planner.errors import (
     LinkError,
@@ -24,15 +21,16 @@ from planner.errors import (
     RigUnreachable,
 )
 from planner.link.client import RigClient
-from planner.link.messages import Description, Intent, ShotReport
+from planner.link.messages import Description, ShotReport
 from planner.logbook import states
 from planner.logbook.book import Logbook, NightRow
 from planner.logbook.driving import Driving, NewAttempt, OpenAttempt, Step
 from planner.night.contact import FIRST_WAIT_S, Contact, Hands, StopAsked
 from planner.night.dwells import Dwells
 from planner.night.fates import CONFIRMED, Fate, fate_of, withdraw
+from planner.night.held import Held, Progress
 from planner.night.reconciling import ask_about, deal_with_strangers
-from planner.night.replacements import first_rows, missed_positions, replacement_order
+from planner.night.replacements import append_missed
 from planner.night.reports import fraction_of, outcome_of
 from planner.night.shots import ShotMaker, to_us
 
@@ -41,29 +39,6 @@ ASK_WAIT_S = 2.0  # how long the rig may think about an answer: also how soon a 
 ACK_EVERY = 16  # results that may wait to be acknowledged together
 GRACE_S = 600.0  # a shot that could not start so long after its time must not start any more
 SECOND_US = 1_000_000
-
-
-@dataclass(frozen=True, kw_only=True)
-class Progress:
-    """How far a night is. `fraction` is that of the last shot that gave one."""
-
-    sent: int
-    total: int
-    left_s: float
-    rig_time_us: int
-    fraction: float | None
-    ended: str  # the state in which the last shot ended
-
-
-@dataclass(kw_only=True)
-class Held:
-    """An attempt that the rig holds, or is to get (`intent` not None and not `confirmed`)."""
-
-    attempt: OpenAttempt
-    intent: Intent | None
-    length_s: float
-    confirmed: bool
-    noted: bool  # the confirmation is in the logbook
 
 
 class Dispatcher:
@@ -482,21 +457,11 @@ class Dispatcher:
 
     def _replace_missed(self) -> int:
         """Append the missed shots that still fit the night as a new revision; how many."""
-        plan = self._book.night_plan(self._night.id)
-        missed = missed_positions(plan, self._driving.ends(self._night.id), next_position=self._next)
-        if not len(missed):
-            return 0
-        tail = replacement_order(plan, missed, seed=len(plan.order))
-        busy_us = np.cumsum(tail.settle_s + tail.duration_s) * SECOND_US
-        fits = int(np.count_nonzero(self._free_us + busy_us <= self._window_end_us()))
-        if fits < len(tail):
-            with self._step() as step:
-                step.audit("missed_shots_left", {"missed": len(tail), "repeated": fits})
-        if fits:
-            with self._step() as step:
-                step.revise(first_rows(tail, fits), from_position=len(plan.order), why=f"{fits} missed shots again")
+        room_s = (self._window_end_us() - self._free_us) / SECOND_US
+        added = append_missed(self._book, self._driving, self._step, self._night.id, room_s=room_s)
+        if added:
             self._load()
-        return fits
+        return added
 
 
 def _us(seconds: float) -> int:

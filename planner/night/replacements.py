@@ -5,13 +5,16 @@ it had: had that block been flipped, its replacement would have been flipped wit
 """
 
 from collections import Counter
-from collections.abc import Iterable
+from collections.abc import Callable, Iterable
+from contextlib import AbstractContextManager
 from dataclasses import replace
 
 import numpy as np
 
 from planner.arrays import IntArray
 from planner.design.running_order import Kind, RunningOrder
+from planner.logbook.book import Logbook
+from planner.logbook.driving import Driving, Step
 from planner.logbook.orders import ORDER_COLUMNS
 from planner.logbook.plans import NightPlan
 from planner.logbook.states import DONE, WITHDRAWN
@@ -80,6 +83,29 @@ def replacement_order(plan: NightPlan, missed: IntArray, *, seed: int) -> Runnin
         seed=seed,
         notes={"replaces": [int(position) for position in rows]},
     )
+
+
+def append_missed(
+    book: Logbook,
+    driving: Driving,
+    step: Callable[[], AbstractContextManager[Step]],
+    night_id: int,
+    *,
+    room_s: float,
+) -> int:
+    """Append the missed shots of a night whose order is through, as far as they fit into `room_s`; how many."""
+    plan = book.night_plan(night_id)
+    missed = missed_positions(plan, driving.ends(night_id), next_position=len(plan.order))
+    if not len(missed):
+        return 0
+    tail = replacement_order(plan, missed, seed=len(plan.order))
+    fits = int(np.count_nonzero(np.cumsum(tail.settle_s + tail.duration_s) <= room_s))
+    with step() as writing:
+        if fits < len(tail):
+            writing.audit("missed_shots_left", {"missed": len(tail), "repeated": fits})
+        if fits:
+            writing.revise(first_rows(tail, fits), from_position=len(plan.order), why=f"{fits} missed shots again")
+    return fits
 
 
 def first_rows(order: RunningOrder, count: int) -> RunningOrder:

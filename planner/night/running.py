@@ -12,7 +12,8 @@ from planner.link.messages import new_key
 from planner.logbook.book import Logbook, NightRow
 from planner.logbook.states import NIGHT_OPEN
 from planner.night.contact import Hands
-from planner.night.dispatcher import Dispatcher, Progress
+from planner.night.dispatcher import Dispatcher
+from planner.night.held import Progress
 
 
 def now_us() -> int:

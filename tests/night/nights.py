@@ -17,7 +17,8 @@ from planner.link.messages import new_key
 from planner.logbook import Logbook, NightRow, open_logbook
 from planner.logbook.booking import NewNight, NewRequest
 from planner.night.contact import Hands
-from planner.night.dispatcher import Dispatcher, Progress
+from planner.night.dispatcher import Dispatcher
+from planner.night.held import Progress
 from planner.sequence.table import ShotTable
 from tests.link.rigs import EVENING, BenchRig
 
