@@ -106,8 +106,8 @@ def _show(summary: dict[str, Any], others: dict[str, "Quality"]) -> None:
     )
     if summary["dwells"]:
         console.print(
-            "Shuffled and swept as if the slow switch could flip at every shot, without settle times and dwells: no rig "
-            "could run them so. What is left of slow drift in the slow switch's own effects is what dwells cost.",
+            "Shuffled and swept as if the slow switch could flip at every shot, without settle times and dwells: no "
+            "rig could run them so. What is left of slow drift in the slow switch's own effects is what dwells cost.",
             markup=False,
         )
     draw = summary["last_draw"]

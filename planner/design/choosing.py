@@ -21,8 +21,8 @@ from planner.design.arrangements import Patterns
 ComplexArray = NDArray[np.complex64]
 
 WORK = 1.5e9  # complex products per pass that a pass may cost; sets pool and band for large nights
-BAND = 384  # frequencies watched for rhythms that nobody declared
-BAND_WEIGHT = 1.0  # of the cubed band against the declared rhythms: a peak costs, a plain does not
+BAND = 800  # frequencies watched for rhythms that nobody declared
+BAND_WEIGHT = 5.0  # of the band's fourth power against the declared rhythms: a peak costs, a plain does not
 WORST_ABOVE = 0.02  # added variance from rhythms above which an effect counts as a worst case
 WORST_WEIGHT = 0.3
 
@@ -42,7 +42,7 @@ def limits_for(packets: int, patterns: int) -> tuple[int, int]:
     """Pool size and number of band frequencies that keep a pass within WORK."""
     each = WORK / max(1, packets * patterns)
     band = int(np.clip(each / 64, 24, BAND))
-    return int(np.clip(each / (band + 8), 16, 240)), band
+    return int(np.clip(each / (band + 8), 16, 96)), band
 
 
 def choose(
@@ -98,7 +98,7 @@ def choose(
             whole = band_power + (after - before) / np.float32(counts[p] * additive)
             cost = heard @ table.importance / slow + WORST_WEIGHT * np.maximum(heard - WORST_ABOVE, 0.0).sum(axis=1)
             # a packet's own score is one of n that make up the effect, as its rhythm's share is
-            cost += table.scores / counts[p] + BAND_WEIGHT * (whole**3).mean(axis=1)
+            cost += table.scores / counts[p] + BAND_WEIGHT * (whole**4).mean(axis=1)
             best = int(cost.argmin())
             choice[i], sums[p], band_power = best, tried[best], whole[best]
             if progress is not None and done % 256 == 0:

@@ -26,7 +26,7 @@ EFFECT_SHARE = 0.05  # share of random flips of a point that may pass the bars o
 FEW_UNITS = 64  # with so few units (dwells) all meet in one part, and flips decide most of the figures: be choosier
 FEW_SHARE = 0.002
 LEAST_LOG2 = 20.0  # but leave at least a million members
-NIGHT_SHARES = (0.5, 0.5, 0.1)  # share of what is left that may pass the bars on means (additive, coupled) and peak
+NIGHT_SHARES = (0.5, 0.5, 0.03)  # share of what is left that may pass the bars on means (additive, coupled) and peak
 MOST_TRIES = 4000  # batches before a draw gives up
 
 
