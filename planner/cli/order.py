@@ -23,8 +23,11 @@ FIGURES = ("additive_mean", "additive_worst", "coupled_mean", "coupled_worst", "
 @click.option("--out", type=click.Path(), help="write the order here, a CSV with one row a shot")
 @click.option("--measured-only", is_flag=True, help="leave warm-up and check shots out of the CSV")
 @click.option("--quick", is_flag=True, help="a random spread order only, without letting rhythms cancel")
+@click.option("--picture", type=click.Path(), help="draw the order: .png, .pdf or .svg")
 @click.option("--json", "as_json", is_flag=True, help="print one JSON object")
-def command(file: str, seed: int, out: str | None, measured_only: bool, quick: bool, as_json: bool) -> None:
+def command(
+    file: str, seed: int, out: str | None, measured_only: bool, quick: bool, picture: str | None, as_json: bool
+) -> None:
     """Put the shots of a sequence in a running order.
 
     The figures are the variance that drift adds to what the night estimates, in units of single-shot noise, beside
@@ -32,7 +35,7 @@ def command(file: str, seed: int, out: str | None, measured_only: bool, quick: b
     settle wait), duration_s, hold_s, phase_deg, switch_NAME (+1 for the first state), every setting in its own unit,
     and kind (0 measured, 1 warm-up, 2 check), packet, cell, repeat, unit (block of the last draw).
     """
-    from planner.design.compare import shuffled_and_swept, wanted_figures
+    from planner.design.compare import parity_figures, shuffled_and_swept
     from planner.design.drift import drifts_of
     from planner.design.ordering import make_order
     from planner.sequence.compiler import compile_sequence
@@ -42,6 +45,10 @@ def command(file: str, seed: int, out: str | None, measured_only: bool, quick: b
 
     if out is not None and Path(out).suffix.lower() != ".csv":
         raise InputError(f'--out ends in .csv; found "{out}"')
+    if picture is not None:
+        from planner.plots.style import check_place
+
+        check_place(picture)
     sequence = read_sequence(file)
     rig = rig_of(sequence)
     compiled = compile_sequence(sequence, rig)
@@ -49,9 +56,13 @@ def command(file: str, seed: int, out: str | None, measured_only: bool, quick: b
     check_order_limits(compiled, rig, order.start_s, order.shot, settle_s=order.settle_s)
     drifts = drifts_of(sequence, float(compiled.table.duration_s.sum()))
     others = shuffled_and_swept(compiled.table, sequence, drifts, seed=seed)
-    wanted = wanted_figures(compiled.table, sequence, order, drifts)
+    parities = parity_figures(compiled.table, sequence, order)
     if out is not None:
         write_order(order, compiled.table, sequence, out, measured_only=measured_only)
+    if picture is not None:
+        from planner.plots import running_order, style
+
+        style.save(running_order.figure(order, compiled.table, sequence, sequence.title), picture)
     length = float(order.start_s[-1] + order.settle_s[-1] + order.duration_s[-1])
     summary = {
         "title": sequence.title,
@@ -61,12 +72,13 @@ def command(file: str, seed: int, out: str | None, measured_only: bool, quick: b
         "hours": length / 3600.0,
         "settling_fraction": float(order.settle_s.sum()) / length,
         "figures": dict(order.figures),
-        "wanted_figures": wanted,
+        "parities": parities,
         "shuffled": others["shuffled"].figures(),
         "swept": others["swept"].figures(),
         "dwells": any(switch.slow for switch in sequence.switches.values()),
         "last_draw": dict(order.notes),
         "out": out,
+        "picture": picture,
     }
     if as_json:
         click.echo(json.dumps(summary))
@@ -96,8 +108,10 @@ def _show(summary: dict[str, Any], others: dict[str, "Quality"]) -> None:
         table.add_row(
             name.replace("_", " "), f"{mine:.3g}", widened, *(f"{column[name]:.3g}" for column in columns[1:])
         )
-    for name, value in summary["wanted_figures"].items():
-        table.add_row(f"wanted: {name.replace('_', ' ')}", f"{value:.3g}", f"+{100 * wider(value):.2g} %", "", "")
+    for parity, figures in summary["parities"].items():
+        for name in ("additive_mean", "coupled_mean"):
+            value = figures[name]
+            table.add_row(f"{parity}: {name.replace('_', ' ')}", f"{value:.3g}", f"+{100 * wider(value):.2g} %", "", "")
     console.print(table)
     console.print(
         "Units of single-shot variance: 1 doubles the variance of an estimate. coupled: drift of phase and contrast, "
@@ -119,8 +133,9 @@ def _show(summary: dict[str, Any], others: dict[str, "Quality"]) -> None:
         )
     else:
         console.print("No parity is wanted, so nothing was flipped at the end.", markup=False)
-    if summary["out"]:
-        console.print(f"written: {summary['out']}", markup=False, soft_wrap=True)
+    for key, words in (("out", "written"), ("picture", "picture")):
+        if summary[key]:
+            console.print(f"{words}: {summary[key]}", markup=False, soft_wrap=True)
 
 
 def write_order(

@@ -4,7 +4,7 @@ import numpy as np
 
 from planner.arrays import IntArray
 from planner.design.drift import Drifts
-from planner.design.ordering import judge
+from planner.design.ordering import judge, quality_of
 from planner.design.quality import Quality
 from planner.design.running_order import Kind, RunningOrder
 from planner.sequence.model import Sequence
@@ -27,17 +27,10 @@ def _judge(table: ShotTable, sequence: Sequence, rows: IntArray, drifts: Drifts)
     return judge(table, sequence, rows, mid, np.full(len(rows), int(Kind.MEASURE)), drifts)
 
 
-def wanted_figures(table: ShotTable, sequence: Sequence, order: RunningOrder, drifts: Drifts) -> dict[str, float]:
-    """Mean added variance over the effects of the wanted parity alone; empty where no parity is wanted."""
-    if not sequence.goal.wanted:
-        return {}
-    quality = judge(
-        table, sequence, order.shot, order.start_s + order.settle_s + order.duration_s / 2, order.kind, drifts
-    )
-    names = set(sequence.goal.wanted)
-
-    def mean(values: dict[str, float]) -> float:
-        mine = [value for name, value in values.items() if set(name.rsplit(" ", 2)[-2].split("*")) == names]
-        return float(np.mean(mine)) if mine else 0.0
-
-    return {"additive_mean": mean(dict(quality.additive)), "coupled_mean": mean(dict(quality.coupled))}
+def parity_figures(table: ShotTable, sequence: Sequence, order: RunningOrder) -> dict[str, dict[str, float]]:
+    """Added variance of the wanted parity's effects, and of each slow switch's own, which dwells leave to slow drift:
+    {"collar*kick": {"additive_mean", "additive_worst", "coupled_mean", "coupled_worst"}, ...}."""
+    shown = [tuple(sequence.goal.wanted)] if sequence.goal.wanted else []
+    shown += [(name,) for name, switch in sequence.switches.items() if switch.slow and (name,) not in shown]
+    quality = quality_of(order, table, sequence)
+    return {"*".join(parity): quality.of_parity(parity) for parity in shown}

@@ -219,6 +219,12 @@ def _notes(allowed: RestrictedSet | None, units: "flips.Units") -> dict[str, Any
     return notes
 
 
+def quality_of(order: RunningOrder, table: ShotTable, sequence: Sequence) -> Quality:
+    """The quality of an order of one sequence, effect by effect."""
+    mid = order.start_s + order.settle_s + order.duration_s / 2
+    return judge(table, sequence, order.shot, mid, order.kind, drifts_of(sequence, float(table.duration_s.sum())))
+
+
 def judge(
     table: ShotTable, sequence: Sequence, rows: IntArray, mid_s: FloatArray, kind: IntArray, drifts: Drifts
 ) -> Quality:

@@ -26,7 +26,8 @@ FREQUENCIES_AT_ONCE = 64  # keeps the table of turning phases of 200,000 shots u
 
 @dataclass(frozen=True, kw_only=True)
 class Quality:
-    """The figures of one order. `additive` and `coupled` map effect names to values."""
+    """The figures of one order. `additive`, `coupled` and `parity` map effect names to values and to the parity's
+    switches."""
 
     additive_mean: float
     additive_worst: float
@@ -37,6 +38,19 @@ class Quality:
     peak_period_s: float
     additive: Mapping[str, float]
     coupled: Mapping[str, float]
+    parity: Mapping[str, tuple[str, ...]]
+
+    def of_parity(self, parity: tuple[str, ...]) -> dict[str, float]:
+        """Mean and worst of the effects of one parity (its switches in any order); 0 where it has none."""
+        wanted = set(parity)
+        additive = [value for name, value in self.additive.items() if set(self.parity[name]) == wanted]
+        coupled = [value for name, value in self.coupled.items() if set(self.parity[name]) == wanted]
+        return {
+            "additive_mean": float(np.mean(additive)) if additive else 0.0,
+            "additive_worst": max(additive, default=0.0),
+            "coupled_mean": float(np.mean(coupled)) if coupled else 0.0,
+            "coupled_worst": max(coupled, default=0.0),
+        }
 
     def figures(self) -> dict[str, float]:
         """The seven numbers that go into the logbook."""
@@ -89,6 +103,7 @@ def assess(
         peak_period_s=float(1.0 / grid[worst]),
         additive=additive,
         coupled=coupled,
+        parity={effect.name: effect.parity for effect in effects},
     )
 
 
