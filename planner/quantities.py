@@ -141,7 +141,8 @@ _USUAL = {  # what people write for these units
     "hrs": "h", "hour": "h", "hours": "h", "day": "d", "days": "d", "msec": "ms", "usec": "us", "micron": "um",
     "degree": "deg", "degrees": "deg", "radian": "rad", "radians": "rad", "percent": "%", "erec": "Er", "E_r": "Er",
     "Erec": "Er", "recoil": "Er", "recoils": "Er", "turns": "turn", "cycle": "turn", "rev": "turn", "volt": "V",
-    "degC": "K", "celsius": "K", "Gauss": "G", "gauss": "G", "hz": "Hz", "khz": "kHz", "mhz": "MHz", "amp": "A", "watt": "W",
+    "degC": "K", "celsius": "K", "Gauss": "G", "gauss": "G", "hz": "Hz", "khz": "kHz", "mhz": "MHz", "amp": "A",
+    "watt": "W",
 }  # fmt: skip
 
 
