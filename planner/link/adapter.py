@@ -59,7 +59,7 @@ class Result:
     flags: tuple[str, ...] = ()
 
 
-class ShotFailed(Exception):  # noqa: N818 - says what happened to the shot; the program it ends is the shot's
+class ShotFailed(Exception):
     """Raised by `play` when the shot started and gave no result; the text becomes the report's `why`."""
 
 

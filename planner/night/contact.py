@@ -16,7 +16,7 @@ SLICE_S = 0.25  # how soon a wait notices that someone asked to stop
 Answer = TypeVar("Answer")
 
 
-class StopAsked(Exception):  # noqa: N818 - not an error: a person asked, while the rig could not be reached
+class StopAsked(Exception):
     """Raised out of a wait when someone asked to stop."""
 
 
