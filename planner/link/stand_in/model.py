@@ -268,7 +268,7 @@ class StandInModel:
         words = np.random.Philox(key=key, counter=counter).random_raw(count * DRAWS).reshape(count, DRAWS)
         uniform: FloatArray = ((words[ordinal - first] >> np.uint64(11)) + 0.5) * 2.0**-53
         radius = np.sqrt(-2 * np.log(uniform[:, : DRAWS // 2]))
-        normal: FloatArray = radius * np.cos(2 * np.pi * uniform[:, DRAWS // 2 :])
+        normal = np.asarray(radius * np.cos(2 * np.pi * uniform[:, DRAWS // 2 :]), dtype=np.float64)
         return uniform, normal
 
 
