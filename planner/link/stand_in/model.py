@@ -25,7 +25,8 @@ from planner.physics.interferometer import scale_factor
 from planner.physics.loss import population
 
 DRIFTING = ("phase", "acceleration", "offset", "contrast", "atoms")
-DRAWS = 16  # random numbers set aside for each shot
+NORMALS = 8  # normal numbers of each shot, each from two uniform ones
+DRAWS = 24  # uniform numbers of each shot: those behind the normal ones, and eight of their own
 WORDS_A_BLOCK = 4  # the counter-based generator (Philox) makes four words a step
 EXACT_BELOW = 1000  # atoms below which the outcome is drawn from the binomial itself, not its normal limit
 
@@ -149,9 +150,9 @@ class StandInModel:
         atoms = np.maximum(atoms * (1 + self._number["memory.strength"] * load), 0.0).round()
         offset = 0.5 + drift["offset"] + self.profile.rhythm_offset * turn
         fraction = np.clip(offset + contrast / 2 * np.cos(phase), 0.0, 1.0)
-        in_a = _binomial(atoms, fraction, normal[:, 3], uniform[:, 8])
-        outlier = uniform[:, 9] < self._number["faults.outliers"]
-        in_a = np.where(outlier, np.round(uniform[:, 10] * atoms), in_a)
+        in_a = _binomial(atoms, fraction, normal[:, 3], uniform[:, 2 * NORMALS])
+        outlier = uniform[:, 2 * NORMALS + 1] < self._number["faults.outliers"]
+        in_a = np.where(outlier, np.round(uniform[:, 2 * NORMALS + 2] * atoms), in_a)
         detection, background = self._number["noise.detection"], self._number["noise.background"]
         atoms_a = in_a + detection * normal[:, 4]
         atoms_b = atoms - in_a + detection * normal[:, 5]
@@ -253,10 +254,10 @@ class StandInModel:
         return out
 
     def _random(self, ordinal: IntArray, stream: int = 0) -> tuple[FloatArray, FloatArray]:
-        """Uniform (n, DRAWS) and normal (n, DRAWS // 2) numbers that belong to each ordinal.
+        """Uniform (n, DRAWS) and normal (n, NORMALS) numbers that belong to each ordinal.
 
-        The normal ones are made from the first DRAWS uniforms in pairs (Box & Muller); draws that are used as uniform
-        take columns whose normal partners nobody uses.
+        The normal ones are made from the first 2 NORMALS uniforms in pairs (Box & Muller); draws that are used as
+        uniform take later columns.
         """
         first = int(ordinal.min()) if len(ordinal) else 0
         count = int(ordinal.max()) - first + 1 if len(ordinal) else 0
@@ -266,9 +267,9 @@ class StandInModel:
         key = np.random.SeedSequence(self._seed, spawn_key=(stream,)).generate_state(2, np.uint64)
         counter = (first * DRAWS // WORDS_A_BLOCK) % 2**256
         words = np.random.Philox(key=key, counter=counter).random_raw(count * DRAWS).reshape(count, DRAWS)
-        uniform: FloatArray = ((words[ordinal - first] >> np.uint64(11)) + 0.5) * 2.0**-53
-        radius = np.sqrt(-2 * np.log(uniform[:, : DRAWS // 2]))
-        normal = np.asarray(radius * np.cos(2 * np.pi * uniform[:, DRAWS // 2 :]), dtype=np.float64)
+        uniform = np.asarray(((words[ordinal - first] >> np.uint64(11)) + 0.5) * 2.0**-53, dtype=np.float64)
+        radius = np.sqrt(-2 * np.log(uniform[:, :NORMALS]))
+        normal = np.asarray(radius * np.cos(2 * np.pi * uniform[:, NORMALS : 2 * NORMALS]), dtype=np.float64)
         return uniform, normal
 
 
