@@ -17,6 +17,7 @@ COMMANDS: dict[str, tuple[str, str]] = {
     "init": ("planner.cli.init", "Write a commented starter sequence and rig file"),
     "check": ("planner.cli.check", "Find every problem of a sequence or rig file"),
     "compile": ("planner.cli.compile", "Compile a sequence to its shots and timelines"),
+    "allocate": ("planner.cli.allocate", "Share out rig time for a goal: holds and packets, proved"),
     "order": ("planner.cli.order", "Put the shots of a sequence in a running order"),
     "timeline": ("planner.cli.timeline", "Draw the timeline of one shot"),
     "rehearse": ("planner.cli.rehearse", "Rehearse a whole night on the stand-in rig"),
