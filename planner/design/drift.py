@@ -41,6 +41,11 @@ class Prior:
         """Squared amplitudes (n_period,)."""
         return np.array(self.amplitudes, dtype=np.float64) ** 2
 
+    @property
+    def walk(self) -> "Prior":
+        """The walk alone, without the sinusoids."""
+        return Prior(rate=self.rate)
+
 
 def reference_prior(total_s: float, wander: float = 5.0) -> Prior:
     """What is assumed where a sequence declares nothing: a walk that reaches five times the single-shot noise by the

@@ -8,7 +8,7 @@ import numpy as np
 
 from planner.arrays import FloatArray, IntArray, SignArray
 from planner.design.arrangements import walk_cost
-from planner.design.drift import Prior, period_grid, suffix_sums
+from planner.design.drift import Prior, added_variance, period_grid, suffix_sums
 from planner.design.effects import coupled_pair, effects_of
 from planner.design.quality import any_period
 from planner.design.restricted import FlipPart, RestrictedSet
@@ -17,7 +17,7 @@ from planner.sequence.model import Sequence
 if TYPE_CHECKING:
     from planner.design.ordering import Draft
 
-RHYTHM_NUMBERS = 4e7  # complex responses kept for the any-period bar: 320 MB; longer nights watch fewer frequencies
+RHYTHM_WORK = 4e6  # units times effects times frequencies of the any-period bar; longer nights watch fewer frequencies
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -124,11 +124,18 @@ def restricted_set(draft: "Draft", *, seed: int) -> RestrictedSet | None:
     rows, _ = flipped_rows(draft, units, np.ones(units.count))
     shots = _Shots(draft, rows)
     touched = [effect for effect in shots.effects if units.switch in effect.parity]
-    grid = _rhythms(draft, float(len(touched) * units.count))
-    still = [effect for effect in shots.effects if units.switch not in effect.parity or effect.point < 0]
+    still = [effect for effect in shots.effects if units.switch not in effect.parity]
+    points = int(draft.packets.point.max()) + 1
+    grid = _rhythms(draft, units.count * (len(touched) if units.slow else len(touched) / points))
     parts = _slow_part(draft, units, shots, grid) if units.slow else _fast_parts(draft, grid)
-    background = any_period(still, shots.mid_s, grid / (2 * np.pi)) * len(still)
-    return RestrictedSet(parts, units.count, background=background, effects=len(shots.effects), seed=seed)
+    return RestrictedSet(
+        parts,
+        units.count,
+        night=None if units.slow else _night_part(draft, units, shots, grid),
+        background=any_period(still, shots.mid_s, grid / (2 * np.pi)) * len(still),
+        effects=len(shots.effects),
+        seed=seed,
+    )
 
 
 class _Shots:
@@ -146,10 +153,10 @@ class _Shots:
         self.effects = list(effects_of(np.repeat(packets.point[layout.packet], sizes), self.phase_rad, switches))
 
 
-def _rhythms(draft: "Draft", numbers: float) -> FloatArray:
-    """Angular frequencies of the any-period bar, as many as memory allows."""
+def _rhythms(draft: "Draft", met: float) -> FloatArray:
+    """Angular frequencies of the any-period bar, evenly spread; met: units times the effects that each meets."""
     grid = 2 * np.pi * period_grid(draft.total_s)
-    step = max(1, int(np.ceil(numbers * len(grid) / RHYTHM_NUMBERS)))
+    step = max(1, int(np.ceil(met * len(grid) / RHYTHM_WORK)))
     return grid[step // 2 :: step]
 
 
@@ -207,6 +214,34 @@ def _fast_parts(draft: "Draft", grid: FloatArray) -> list[FlipPart]:
     return parts
 
 
+def _night_part(draft: "Draft", units: Units, shots: _Shots, grid: FloatArray) -> FlipPart:
+    """The effects of the whole night, in which all units meet; packets sum to zero, so walks add a constant."""
+    first = np.flatnonzero(np.diff(units.of_packet[shots.place], prepend=-1))
+
+    def per_unit(weights: FloatArray, omega: FloatArray) -> "np.typing.NDArray[np.complex128]":
+        return np.asarray(np.add.reduceat(weights[:, None] * np.exp(1j * np.outer(shots.mid_s, omega)), first, axis=0))
+
+    features, constant, additive, rhythm = [], [], [], []
+    for effect in shots.effects:
+        if effect.point >= 0 or units.switch not in effect.parity:
+            continue
+        pair = coupled_pair(effect.weights, shots.phase_rad)
+        for prior, rows in ((draft.drifts.additive, (effect.weights,)), (draft.drifts.coupled, pair)):
+            heard = [per_unit(row, prior.omega) * np.sqrt(prior.power) for row in rows]
+            features.append(np.concatenate([np.concatenate([one.real, one.imag], axis=1) for one in heard], axis=1))
+            constant.append(sum(float(added_variance(row, shots.mid_s, prior.walk)) for row in rows))
+            additive.append(len(rows) == 1)
+        chunks = np.array_split(grid, max(1, len(grid) * len(shots.mid_s) // 4_000_000))
+        rhythm.append(np.concatenate([per_unit(effect.weights, some).astype(np.complex64) for some in chunks], axis=1))
+    return FlipPart(
+        units=np.arange(units.count),
+        features=_padded(features),
+        constant=np.array(constant),
+        additive=np.array(additive, dtype=np.bool_),
+        rhythm=np.array(rhythm),
+    )
+
+
 def _responses(weights: FloatArray, inside: FloatArray, start_s: FloatArray, prior: Prior) -> FloatArray:
     """Features (n_unit, 2 n_period) of the declared rhythms for weights (n_unit, size)."""
     response = (weights @ np.exp(1j * np.outer(inside, prior.omega))) * np.exp(1j * np.outer(start_s, prior.omega))
@@ -223,7 +258,7 @@ def _slow_part(draft: "Draft", units: Units, shots: _Shots, grid: FloatArray) ->
     """One part: sets of dwells meet in every effect, and do not sum to zero: the full quadratic form, taken apart."""
     drifts = draft.drifts
     unit = units.of_packet[shots.place]
-    effects = [effect for effect in shots.effects if units.switch in effect.parity and effect.point >= 0]
+    effects = [effect for effect in shots.effects if units.switch in effect.parity]
     features, additive, rhythm = [], [], []
     for effect in effects:
         times, owner = shots.mid_s[effect.rows], unit[effect.rows]

@@ -27,6 +27,7 @@ from planner.design.packets import Packets, find_packets
 from planner.design.quality import Quality, assess
 from planner.design.restricted import RestrictedSet
 from planner.design.running_order import Kind, RunningOrder
+from planner.errors import InputError, NotEnoughData
 from planner.sequence.model import Sequence
 from planner.sequence.table import ShotTable
 
@@ -69,7 +70,47 @@ def make_order(
     allowed = flips.restricted_set(draft, seed=seed)
     rng = np.random.default_rng(np.random.SeedSequence(seed, spawn_key=(4,)))
     signs = allowed.draw(1, rng)[0] if allowed is not None else np.ones(flips.units_of(draft).count)
-    return assemble(draft, signs, seed=seed, allowed=allowed)
+    return assemble(draft, signs, seed=seed, effort=effort, allowed=allowed)
+
+
+def randomisation_group(order: RunningOrder, table: ShotTable, sequence: Sequence) -> tuple[RestrictedSet, FloatArray]:
+    """The set that an order's last draw was made from, and the member that was drawn: signs (n_unit,).
+
+    Made again from the order's seed and effort, and compared with the order, so that the set is the one of that night.
+
+    Raises:
+        NotEnoughData: no parity is wanted, so nothing was drawn.
+        InputError: the order was not made from this table, sequence and version of the program.
+    """
+    draft = draft_order(table, sequence, seed=order.seed, effort=order.notes.get("effort", "full"))
+    allowed = flips.restricted_set(draft, seed=order.seed)
+    if allowed is None:
+        raise NotEnoughData(
+            "no parity is wanted in this sequence, so nothing was drawn at random at the end of ordering; name the "
+            "switches of the signal in goal.wanted before the night"
+        )
+    signs = np.ones(allowed.n_unit)
+    inside = order.unit >= 0
+    signs[order.unit[inside]] = order.flip[inside]
+    rows, _ = flips.flipped_rows(draft, flips.units_of(draft), signs)
+    if not np.array_equal(rows, order.shot[order.kind == int(Kind.MEASURE)]):
+        raise InputError(
+            f"the order of seed {order.seed} is not what this sequence gives with this version of Nightfringe: use the "
+            "sequence text and the version that are stored with the night"
+        )
+    return allowed, signs
+
+
+def redraw(
+    order: RunningOrder, table: ShotTable, sequence: Sequence, *, n: int, rng: np.random.Generator
+) -> FloatArray:
+    """n uniform draws from the set that the order's last draw was made from: signs (n, n_unit) of its units.
+
+    A shot's switch state in draw k is its own times signs[k, unit] * flip, `unit` and `flip` as the order has them.
+    Raises as `randomisation_group` does.
+    """
+    allowed, _ = randomisation_group(order, table, sequence)
+    return allowed.draw(n, rng)
 
 
 def draft_order(
@@ -172,7 +213,9 @@ def _powers(patterns: Patterns, drifts: Drifts, omega: FloatArray) -> FloatArray
     return np.asarray(np.where(patterns.coupled[:, None], coupled, additive))
 
 
-def assemble(draft: Draft, signs: FloatArray, *, seed: int, allowed: RestrictedSet | None) -> RunningOrder:
+def assemble(
+    draft: Draft, signs: FloatArray, *, seed: int, effort: Effort, allowed: RestrictedSet | None
+) -> RunningOrder:
     """The running order of a draft with its units flipped by signs (n_unit,)."""
     table, sequence, layout = draft.table, draft.sequence, draft.layout
     units = flips.units_of(draft)
@@ -200,7 +243,7 @@ def assemble(draft: Draft, signs: FloatArray, *, seed: int, allowed: RestrictedS
         flip=np.insert(sign, at, 1).astype(np.int8),
         seed=seed,
         figures=judge(table, sequence, everything, start + settle + duration / 2, kind, draft.drifts).figures(),
-        notes=_notes(allowed, units),
+        notes={"effort": effort, **_notes(allowed, units)},
     )
 
 

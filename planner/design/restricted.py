@@ -1,32 +1,46 @@
 """The restricted draw: the last random choice of an order, and the group of the exact randomisation test.
 
 All else fixed, the wanted switch is flipped in whole units: packets of a fast switch, whole sets of dwells of a slow
-one (states exchanged between dwells that are alike). Of all 2^n flips those count that keep every figure of the
-wanted effects under a stated bar; one of them is drawn, each with the same chance. Under the hypothesis that the
-switch does nothing to any shot, every member of that set was as likely as the one that ran, and would have given the
-same counts: that is an exact test, whatever the drift did.
+one (states exchanged between dwells that are alike). Those flips are allowed that keep every figure of the wanted
+effects under a stated bar; one of them is drawn, each with the same chance. Under the hypothesis that the switch does
+nothing to any shot, every member of that set was as likely as the one that ran, and would have given the same counts:
+that is an exact test, whatever the drift did.
 
 How it stays quick: a figure is quadratic in the signs z. With units that each sum to zero, walks of drift reach an
 effect inside units alone and no flip changes that; rhythms add |sum_u z_u R_u|^2. Where units do not sum to zero, the
-full form z'Qz is taken apart into its eigenvectors. Units of different points do not meet in one effect, so the set is
-drawn point by point against the bars on single effects, and accepted whole against the bars on means and peak: a
-uniform draw from a product of sets, kept if it passes, is uniform on what passes.
+full form z'Qz is taken apart into its eigenvectors. Units of different points do not meet in one effect, so each point
+has a part of its own. For each part a list of flips is made once, from the seed: random ones that keep the part's own
+figures under the bars (all of them where there are few). A member of the set takes one listed flip for each part, such
+that means and peak stay under theirs. A uniform draw from a product of lists, kept if it passes, is uniform on what
+passes; and sums of listed numbers are most of what it costs. Effects of the whole night, in which all units meet, are
+looked at last. A night of one part with many units has no product to draw
+from: there fresh flips are tried.
 """
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from math import log2
+from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
-from planner.arrays import FloatArray, IntArray
+from planner.arrays import BoolArray, FloatArray, IntArray
+
+SingleArray = NDArray[np.float32]
+Drawn = Any  # what a list draws: numbers of listed flips (n,), or fresh signs (n, n_unit)
 
 BATCH = 4096
 TRIALS = 16384  # random flips that set the bars
-EFFECT_SHARE = 0.05  # share of random flips of a point that may pass the bars on its single effects
-FEW_UNITS = 64  # with so few units (dwells) all meet in one part, and flips decide most of the figures: be choosier
-FEW_SHARE = 0.002
+EFFECT_SHARE = 0.05  # share of random flips of a part that may pass the bars on its single effects
+ONE_PART_SHARE = 0.002  # a night of one part has no later choice: be choosier,
 LEAST_LOG2 = 20.0  # but leave at least a million members
-NIGHT_SHARES = (0.5, 0.5, 0.03)  # share of what is left that may pass the bars on means (additive, coupled) and peak
+PEAK_SHARE = 0.1  # share of those that may pass the bar on the peak with the other parts at their mean
+SAMPLE = 512  # flips of a part that set that bar
+LISTED_LOG2 = 26  # members of the product of all lists, at least: a set of a million leaves room for the bars
+LISTED = 256  # flips listed for a part, at least
+WHOLE = 12  # parts with so few units have all their flips looked at
+NIGHT_SHARES = (0.5, 0.5, 0.05)  # share of the product that may pass the bars on means (additive, coupled) and peak
+HOT = 64  # frequencies with the highest mean power, looked at first
 MOST_TRIES = 4000  # batches before a draw gives up
 
 
@@ -43,8 +57,8 @@ class FlipPart:
     units: IntArray
     features: FloatArray
     constant: FloatArray
-    additive: "np.typing.NDArray[np.bool_]"
-    rhythm: "np.typing.NDArray[np.complex64]"
+    additive: BoolArray
+    rhythm: NDArray[np.complex64]
 
     def effects(self, signs: FloatArray) -> FloatArray:
         """Added variance of each effect, (n_draw, n_effect), for signs (n_draw, n_unit)."""
@@ -52,56 +66,137 @@ class FlipPart:
         flat = self.features.transpose(1, 0, 2).reshape(n_unit, n_effect * n_feature)
         return np.asarray(((signs @ flat) ** 2).reshape(len(signs), n_effect, n_feature).sum(axis=2) + self.constant)
 
-    def periods(self, signs: FloatArray) -> FloatArray:
+    def sums(self, signs: FloatArray) -> FloatArray:
+        """Sum over the additive and over the coupled effects, (n_draw, 2)."""
+        values = self.effects(signs)
+        return np.column_stack([values[:, self.additive].sum(axis=1), values[:, ~self.additive].sum(axis=1)])
+
+    def periods(self, signs: FloatArray) -> SingleArray:
         """Sum over the wanted effects of the power at each frequency, (n_draw, n_frequency)."""
         out = np.zeros((len(signs), self.rhythm.shape[2]), dtype=np.float32)
         single = signs.astype(np.float32)
         for response in self.rhythm:
-            out += (single @ response.real) ** 2 + (single @ response.imag) ** 2
-        return out.astype(np.float64)
+            out += (single @ response.real) ** 2
+            out += (single @ response.imag) ** 2
+        return out
 
 
 @dataclass(frozen=True, kw_only=True)
 class Bars:
-    """What every figure of a member must stay under. Means are over the wanted effects, the peak over all effects."""
+    """What every figure of a member must stay under. Means are over the wanted effects, the peak over all effects.
+
+    `peak_of_part`: the peak with the other parts at their mean; infinite where there is one part.
+    """
 
     additive_worst: float
     coupled_worst: float
+    peak_of_part: float
     additive_mean: float
     coupled_mean: float
     any_period_peak: float
 
 
+class _Listed:
+    """The listed flips of one part; what is drawn is their numbers (n,)."""
+
+    def __init__(self, part: FlipPart, signs: FloatArray, power: SingleArray, hot: IntArray) -> None:
+        self.log2_size = log2(len(signs))
+        self._signs = signs
+        self._sums = part.sums(signs)
+        self._power = power
+        self._hot_power = np.ascontiguousarray(power[:, hot])
+        self._where = {row.tobytes(): number for number, row in enumerate(signs.astype(np.int8))}
+
+    def draw(self, n: int, rng: np.random.Generator) -> IntArray:
+        return rng.integers(len(self._signs), size=n)
+
+    def find(self, signs: FloatArray) -> tuple[IntArray, BoolArray]:
+        """Numbers of these flips (n, n_unit), and which of them are listed."""
+        numbers = np.array([self._where.get(row.tobytes(), -1) for row in signs.astype(np.int8)], dtype=np.int64)
+        return numbers, numbers >= 0
+
+    def signs(self, drawn: IntArray) -> FloatArray:
+        return np.asarray(self._signs[drawn])
+
+    def sums(self, drawn: IntArray) -> FloatArray:
+        return np.asarray(self._sums[drawn])
+
+    def power(self, drawn: IntArray, *, hot: bool) -> SingleArray:
+        return np.asarray((self._hot_power if hot else self._power)[drawn])
+
+
+class _Fresh:
+    """Flips of one part with many units, made anew for each draw; what is drawn is the signs (n, n_unit)."""
+
+    def __init__(self, part: FlipPart, bars: Bars, hot: IntArray, rng: np.random.Generator) -> None:
+        self._part, self._bars, self._hot = part, bars, hot
+        passed = tried = 0
+        while passed < 100 and tried < 50 * BATCH:
+            passed += int(_keeps(part, _coins(rng, BATCH, len(part.units)), bars).sum())
+            tried += BATCH
+        self.log2_size = len(part.units) + log2(max(passed, 1) / tried)
+
+    def draw(self, n: int, rng: np.random.Generator) -> FloatArray:
+        return _flips_under(self._part, self._bars, n, rng)
+
+    def find(self, signs: FloatArray) -> tuple[FloatArray, BoolArray]:
+        return signs, _keeps(self._part, signs, self._bars)
+
+    def signs(self, drawn: FloatArray) -> FloatArray:
+        return drawn
+
+    def sums(self, drawn: FloatArray) -> FloatArray:
+        return self._part.sums(drawn)
+
+    def power(self, drawn: FloatArray, *, hot: bool) -> SingleArray:
+        power = self._part.periods(drawn)
+        return np.asarray(power[:, self._hot] if hot else power)
+
+
 class RestrictedSet:
-    """The set of allowed flips of a night. Build it from parts; the same parts and bars give the same set."""
+    """The set of allowed flips of a night. Build it from parts; the same parts and seed give the same set."""
 
     def __init__(
         self,
         parts: list[FlipPart],
         n_unit: int,
         *,
+        night: FlipPart | None = None,
         background: FloatArray,
         effects: int,
-        bars: Bars | None = None,
         seed: int = 0,
     ) -> None:
-        """n_unit: units of the night. background (n_frequency,): power at any period of the effects that no flip
-        touches; effects: how many effects there are in all. Without bars they are set from random flips drawn with
-        `seed`."""
+        """n_unit: units of the night. night: the effects in which units of all parts meet. background (n_frequency,):
+        power at any period of the effects that no flip touches; effects: how many effects there are in all. Bars are
+        set from random flips drawn with `seed`."""
         self._parts = parts
+        self._night = night
         self._background = background.astype(np.float32)
         self._effects = effects
         self.n_unit = n_unit
+        every = parts if night is None else [*parts, night]
+        self._n_additive = max(1, sum(int(part.additive.sum()) for part in every))
+        self._n_coupled = max(1, sum(int((~part.additive).sum()) for part in every))
         rng = np.random.default_rng(np.random.SeedSequence(seed, spawn_key=(7,)))
-        self.bars = bars or self._set_bars(rng)
-        self.log2_size = self._measure(np.random.default_rng(np.random.SeedSequence(seed, spawn_key=(8,))))
+        one = _bars_on_effects(parts, night, rng)
+        mean_power = [part.periods(_flips_under(part, one, SAMPLE, rng)).mean(axis=0) for part in parts]
+        expected = self._background + np.sum(mean_power, axis=0, dtype=np.float32)
+        self._hot = np.sort(np.argsort(expected)[-HOT:])
+        others = [expected - mine for mine in mean_power]
+        self.bars = one if len(parts) < 2 else _with_part_peak(parts, one, others, effects, rng)
+        self._lists = [self._list(part, other, rng) for part, other in zip(parts, others, strict=True)]
+        self.bars = self._bars_on_night(rng)
+        self.log2_size = self._measure(rng)
 
-    def contains(self, signs: FloatArray) -> "np.typing.NDArray[np.bool_]":
+    def contains(self, signs: FloatArray) -> BoolArray:
         """Whether each row of signs (n_draw, n_unit) is a member."""
         inside = np.ones(len(signs), dtype=np.bool_)
-        for part in self._parts:
-            inside &= self._passes(part, part.effects(signs[:, part.units]))
-        inside[inside] = self._passes_whole(signs[inside])
+        drawn = []
+        for part, listed in zip(self._parts, self._lists, strict=True):
+            found, known = listed.find(signs[:, part.units])
+            inside &= known
+            drawn.append(found)
+        inside[inside] = self._under_bars([found[inside] for found in drawn])
         return inside
 
     def draw(self, n: int, rng: np.random.Generator) -> FloatArray:
@@ -109,111 +204,166 @@ class RestrictedSet:
         out = np.ones((n, self.n_unit))
         if not self._parts:
             return out
-        filled = 0
+        filled, share = 0, 0.5
         for _ in range(MOST_TRIES):
-            tried = self._draw_by_part(min(BATCH, 2 * (n - filled) + 64), rng)
-            kept = tried[self._passes_whole(tried)]
-            take = min(len(kept), n - filled)
-            out[filled : filled + take] = kept[:take]
-            filled += take
+            batch = int(np.clip(1.2 * (n - filled) / share, 64, 8 * BATCH))
+            drawn = [listed.draw(batch, rng) for listed in self._lists]
+            kept = np.flatnonzero(self._under_bars(drawn))
+            share = max(len(kept), 0.5) / batch
+            kept = kept[: n - filled]
+            out[filled : filled + len(kept)] = self._signs([mine[kept] for mine in drawn])
+            filled += len(kept)
             if filled == n:
                 return out
         raise RuntimeError("the restricted set is too small to draw from; its bars were set from another night")
 
-    def _draw_by_part(self, n: int, rng: np.random.Generator) -> FloatArray:
-        signs = np.ones((n, self.n_unit))
-        for part in self._parts:
-            filled = 0
-            for _ in range(MOST_TRIES):
-                tried = _coins(rng, BATCH, len(part.units))
-                kept = tried[self._passes(part, part.effects(tried))]
-                take = min(len(kept), n - filled)
-                signs[filled : filled + take, part.units] = kept[:take]
-                filled += take
-                if filled == n:
-                    break
+    def _list(self, part: FlipPart, others: SingleArray, rng: np.random.Generator) -> "_Listed | _Fresh":
+        n = len(part.units)
+        if n <= WHOLE:
+            every: FloatArray = 1.0 - 2.0 * ((np.arange(2**n)[:, None] >> np.arange(n)) & 1).astype(np.float64)
+            signs = every[_keeps(part, every, self.bars)]
+            power = part.periods(signs)
+            low = self._peaks(power + others) <= self.bars.peak_of_part
+            return _Listed(part, signs[low], power[low], self._hot)
+        if len(self._parts) == 1:
+            return _Fresh(part, self.bars, self._hot, rng)
+        wanted = max(LISTED, 2 ** -(-LISTED_LOG2 // len(self._parts)))
+        kept: dict[bytes, tuple[FloatArray, SingleArray]] = {}
+        for _ in range(MOST_TRIES):
+            signs = _flips_under(part, self.bars, max(SAMPLE, wanted), rng)
+            power = part.periods(signs)
+            for row in np.flatnonzero(self._peaks(power + others) <= self.bars.peak_of_part):
+                kept[signs[row].astype(np.int8).tobytes()] = (signs[row], power[row])
+            if len(kept) >= wanted:
+                break
+        chosen = list(kept.values())[:wanted]
+        return _Listed(part, np.array([row for row, _ in chosen]), np.array([row for _, row in chosen]), self._hot)
+
+    def _peaks(self, power: SingleArray) -> SingleArray:
+        return np.asarray(power.max(axis=1) / self._effects)
+
+    def _figures(self, drawn: "list[Drawn]") -> FloatArray:
+        """Mean additive, mean coupled and peak of each draw, (n_draw, 3)."""
+        sums, power = self._sums(drawn), self._power(drawn, hot=False)
+        if self._night is not None:
+            signs = self._signs(drawn)
+            sums = sums + self._night.sums(signs)
+            power += self._night.periods(signs)
+        return np.column_stack([sums / (self._n_additive, self._n_coupled), self._peaks(power)])
+
+    def _sums(self, drawn: "list[Drawn]") -> FloatArray:
+        """Sum over the additive and over the coupled effects of the parts, (n_draw, 2)."""
+        return np.asarray(np.sum([one.sums(mine) for one, mine in zip(self._lists, drawn, strict=True)], axis=0))
+
+    def _power(self, drawn: "list[Drawn]", *, hot: bool) -> SingleArray:
+        """Power at all frequencies, or at the hot ones, without the whole night's effects: (n_draw, n_frequency)."""
+        power = np.tile(self._background[self._hot] if hot else self._background, (len(drawn[0]), 1))
+        for one, mine in zip(self._lists, drawn, strict=True):
+            power += one.power(mine, hot=hot)
+        return power
+
+    def _signs(self, drawn: "list[Drawn]") -> FloatArray:
+        signs = np.ones((len(drawn[0]), self.n_unit))
+        for part, one, mine in zip(self._parts, self._lists, drawn, strict=True):
+            signs[:, part.units] = one.signs(mine)
         return signs
 
-    def _passes(self, part: FlipPart, values: FloatArray) -> "np.typing.NDArray[np.bool_]":
-        limit = np.where(part.additive, self.bars.additive_worst, self.bars.coupled_worst)
-        return np.asarray((values <= limit).all(axis=1))
-
-    def _whole(self, signs: FloatArray) -> FloatArray:
-        """Mean additive, mean coupled and peak of each draw, (n_draw, 3)."""
-        additive, coupled = np.zeros(len(signs)), np.zeros(len(signs))
-        n_additive = n_coupled = 0
-        power = np.tile(self._background, (len(signs), 1))
-        for part in self._parts:
-            mine = signs[:, part.units]
-            values = part.effects(mine)
-            additive += values[:, part.additive].sum(axis=1)
-            coupled += values[:, ~part.additive].sum(axis=1)
-            n_additive += int(part.additive.sum())
-            n_coupled += int((~part.additive).sum())
-            power += part.periods(mine)
-        return np.column_stack(
-            [additive / max(1, n_additive), coupled / max(1, n_coupled), power.max(axis=1) / self._effects]
-        )
-
-    def _passes_whole(self, signs: FloatArray) -> "np.typing.NDArray[np.bool_]":
-        limits = (self.bars.additive_mean, self.bars.coupled_mean, self.bars.any_period_peak)
-        passed = np.empty(len(signs), dtype=np.bool_)
-        for first in range(0, len(signs), BATCH):
-            passed[first : first + BATCH] = (self._whole(signs[first : first + BATCH]) <= limits).all(axis=1)
+    def _under_bars(self, drawn: "list[Drawn]") -> BoolArray:
+        """Which draws keep every figure under its bar; those that cost little first, and without what the whole
+        night's effects add: what is over a bar without them is over it with them."""
+        bars = np.array([self.bars.additive_mean, self.bars.coupled_mean, self.bars.any_period_peak])
+        passed: BoolArray = np.all(self._sums(drawn) <= bars[:2] * (self._n_additive, self._n_coupled), axis=1)
+        left = np.flatnonzero(passed)
+        passed[left] = self._peaks(self._power([mine[left] for mine in drawn], hot=True)) <= bars[2]
+        left = np.flatnonzero(passed)
+        for first in range(0, len(left), BATCH):
+            some = left[first : first + BATCH]
+            passed[some] = self._peaks(self._power([mine[some] for mine in drawn], hot=False)) <= bars[2]
+        left = np.flatnonzero(passed)
+        if self._night is not None and len(left):
+            mine = [one[left] for one in drawn]
+            passed[left] = np.all(self._figures(mine) <= bars, axis=1)
+            passed[left] &= _keeps(self._night, self._signs(mine), self.bars)
         return passed
 
-    def _set_bars(self, rng: np.random.Generator) -> Bars:
-        """Bars that a stated share of random flips passes: on single effects, point by point, then on the whole."""
-        additive_worst = coupled_worst = 0.0
-        for part in self._parts:
-            n = len(part.units)
-            few = len(self._parts) == 1 and n <= FEW_UNITS
-            share = min(1.0, max(FEW_SHARE, 2.0 ** (LEAST_LOG2 + 4 - n))) if few else EFFECT_SHARE
-            values = part.effects(_coins(rng, TRIALS, n))
-            # the share is that of both bars together, so each alone is passed by more
-            for is_additive in (True, False):
-                mine = values[:, part.additive == is_additive]
-                if mine.shape[1]:
-                    bar = float(np.quantile(mine.max(axis=1), share))
-                    if is_additive:
-                        additive_worst = max(additive_worst, bar)
-                    else:
-                        coupled_worst = max(coupled_worst, bar)
+    def _bars_on_night(self, rng: np.random.Generator) -> Bars:
+        """The bars on means and peak, from draws of the product of lists."""
         if not self._parts:
-            return Bars(additive_worst=0, coupled_worst=0, additive_mean=0, coupled_mean=0, any_period_peak=0)
-        wide = Bars(
-            additive_worst=additive_worst,
-            coupled_worst=coupled_worst,
-            additive_mean=np.inf,
-            coupled_mean=np.inf,
-            any_period_peak=np.inf,
-        )
-        self.bars = wide
-        whole = self._whole(self._draw_by_part(1024, rng))
-        means = [float(np.quantile(whole[:, k], share)) for k, share in enumerate(NIGHT_SHARES)]
-        return Bars(
-            additive_worst=additive_worst,
-            coupled_worst=coupled_worst,
-            additive_mean=means[0],
-            coupled_mean=means[1],
-            any_period_peak=means[2],
-        )
+            return self.bars
+        figures = self._figures([one.draw(BATCH, rng) for one in self._lists])
+        additive, coupled, peak = (float(np.quantile(figures[:, k], share)) for k, share in enumerate(NIGHT_SHARES))
+        return replace(self.bars, additive_mean=additive, coupled_mean=coupled, any_period_peak=peak)
 
     def _measure(self, rng: np.random.Generator) -> float:
-        """log2 of the number of members, estimated from the share of random flips that pass each stage."""
-        size = 0.0
-        for part in self._parts:
-            passed = tried = 0
-            while passed < 100 and tried < 50 * BATCH:
-                signs = _coins(rng, BATCH, len(part.units))
-                passed += int(self._passes(part, part.effects(signs)).sum())
-                tried += BATCH
-            size += len(part.units) + log2(max(passed, 1) / tried)
-        if self._parts:
-            size += log2(max(1, int(self._passes_whole(self._draw_by_part(1024, rng)).sum())) / 1024)
-        return size
+        """log2 of the number of members: the lists' product, times the share of draws from it that pass."""
+        if not self._parts:
+            return 0.0
+        passed = tried = 0
+        while passed < 100 and tried < 50 * BATCH:
+            passed += int(self._under_bars([listed.draw(BATCH, rng) for listed in self._lists]).sum())
+            tried += BATCH
+        return float(sum(listed.log2_size for listed in self._lists) + log2(max(passed, 1) / tried))
 
 
 def _coins(rng: np.random.Generator, n: int, units: int) -> FloatArray:
     """Random signs (n, units)."""
-    return np.where(rng.integers(0, 2, size=(n, units)) == 0, -1.0, 1.0)
+    return np.where(rng.integers(0, 2, size=(n, units), dtype=np.int8) == 0, -1.0, 1.0)
+
+
+def _keeps(part: FlipPart, signs: FloatArray, bars: Bars) -> BoolArray:
+    """Which flips (n, n_unit) keep every single effect of the part under its bar."""
+    limit = np.where(part.additive, bars.additive_worst, bars.coupled_worst)
+    return np.asarray((part.effects(signs) <= limit).all(axis=1))
+
+
+def _flips_under(part: FlipPart, bars: Bars, n: int, rng: np.random.Generator) -> FloatArray:
+    """n random flips of a part that keep its single effects under the bars, (n, n_unit)."""
+    kept: list[FloatArray] = []
+    missing = n
+    for _ in range(MOST_TRIES):
+        signs = _coins(rng, BATCH, len(part.units))
+        signs = signs[_keeps(part, signs, bars)][:missing]
+        kept.append(signs)
+        missing -= len(signs)
+        if missing == 0:
+            return np.concatenate(kept)
+    raise RuntimeError("hardly any flip passes the bars; they were set from another night")
+
+
+def _bars_on_effects(parts: list[FlipPart], night: FlipPart | None, rng: np.random.Generator) -> Bars:
+    """Bars on single effects that a stated share of the random flips of each part passes."""
+    worst = {True: 0.0, False: 0.0}
+    for part in parts:
+        n = len(part.units)
+        share = min(1.0, max(ONE_PART_SHARE, 2.0 ** (LEAST_LOG2 - n))) if len(parts) == 1 else EFFECT_SHARE
+        values = part.effects(_coins(rng, TRIALS, n))
+        # the share is that of both bars together, so each alone is passed by more
+        for additive in (True, False):
+            mine = values[:, part.additive == additive]
+            if mine.shape[1]:
+                worst[additive] = max(worst[additive], float(np.quantile(mine.max(axis=1), share)))
+    if night is not None:  # half of the flips may keep the whole night's effects under the bars
+        values = night.effects(_coins(rng, BATCH, len(night.units)))
+        for additive in (True, False):
+            mine = values[:, night.additive == additive].max(axis=1, initial=0.0)
+            worst[additive] = max(worst[additive], float(np.median(mine)))
+    infinite = float("inf")
+    return Bars(
+        additive_worst=worst[True],
+        coupled_worst=worst[False],
+        peak_of_part=infinite,
+        additive_mean=infinite,
+        coupled_mean=infinite,
+        any_period_peak=infinite,
+    )
+
+
+def _with_part_peak(
+    parts: list[FlipPart], bars: Bars, others: list[SingleArray], effects: int, rng: np.random.Generator
+) -> Bars:
+    """The bar on the peak of single parts, such that the part that is hardest to keep low passes by PEAK_SHARE."""
+    peaks = [
+        (part.periods(_flips_under(part, bars, SAMPLE, rng)) + other).max(axis=1) / effects
+        for part, other in zip(parts, others, strict=True)
+    ]
+    return replace(bars, peak_of_part=max(float(np.quantile(peak, PEAK_SHARE)) for peak in peaks))
