@@ -97,32 +97,37 @@ class Bars:
 
 
 class _Listed:
-    """The listed flips of one part; what is drawn is their numbers (n,)."""
+    """The listed flips of one part, and their opposites, which have the same figures; what is drawn is numbers (n,):
+    2k for the k-th of the list, 2k + 1 for its opposite."""
 
     def __init__(self, part: FlipPart, signs: FloatArray, power: SingleArray, hot: IntArray) -> None:
-        self.log2_size = log2(len(signs))
-        self._signs = signs
-        self._sums = part.sums(signs)
-        self._power = power
+        self.log2_size = 1.0 + log2(len(signs))
+        self._list = signs
+        self._figures = part.sums(signs)
+        self._all_power = power
         self._hot_power = np.ascontiguousarray(power[:, hot])
-        self._where = {row.tobytes(): number for number, row in enumerate(signs.astype(np.int8))}
+        self._where = {(row * row[0]).tobytes(): number for number, row in enumerate(signs.astype(np.int8))}
 
     def draw(self, n: int, rng: np.random.Generator) -> IntArray:
-        return rng.integers(len(self._signs), size=n)
+        return rng.integers(2 * len(self._list), size=n)
 
     def find(self, signs: FloatArray) -> tuple[IntArray, BoolArray]:
         """Numbers of these flips (n, n_unit), and which of them are listed."""
-        numbers = np.array([self._where.get(row.tobytes(), -1) for row in signs.astype(np.int8)], dtype=np.int64)
+        numbers = np.full(len(signs), -1, dtype=np.int64)
+        for i, row in enumerate(signs.astype(np.int8)):
+            k = self._where.get((row * row[0]).tobytes())
+            if k is not None:
+                numbers[i] = 2 * k + (row[0] != self._list[k, 0])
         return numbers, numbers >= 0
 
     def signs(self, drawn: IntArray) -> FloatArray:
-        return np.asarray(self._signs[drawn])
+        return np.asarray(self._list[drawn // 2] * (1.0 - 2.0 * (drawn % 2))[:, None])
 
     def sums(self, drawn: IntArray) -> FloatArray:
-        return np.asarray(self._sums[drawn])
+        return np.asarray(self._figures[drawn // 2])
 
     def power(self, drawn: IntArray, *, hot: bool) -> SingleArray:
-        return np.asarray((self._hot_power if hot else self._power)[drawn])
+        return np.asarray((self._hot_power if hot else self._all_power)[drawn // 2])
 
 
 class _Fresh:
@@ -220,19 +225,21 @@ class RestrictedSet:
     def _list(self, part: FlipPart, others: SingleArray, rng: np.random.Generator) -> "_Listed | _Fresh":
         n = len(part.units)
         if n <= WHOLE:
-            every: FloatArray = 1.0 - 2.0 * ((np.arange(2**n)[:, None] >> np.arange(n)) & 1).astype(np.float64)
+            half = np.arange(2 ** (n - 1))[:, None]  # the others are their opposites
+            every: FloatArray = 1.0 - 2.0 * ((half >> np.arange(n)) & 1).astype(np.float64)
             signs = every[_keeps(part, every, self.bars)]
             power = part.periods(signs)
             low = self._peaks(power + others) <= self.bars.peak_of_part
             return _Listed(part, signs[low], power[low], self._hot)
         if len(self._parts) == 1:
             return _Fresh(part, self.bars, self._hot, rng)
-        wanted = max(LISTED, 2 ** -(-LISTED_LOG2 // len(self._parts)))
+        wanted = max(LISTED, 2 ** (-(-LISTED_LOG2 // len(self._parts)) - 1))
         kept: dict[bytes, tuple[FloatArray, SingleArray]] = {}
         for _ in range(MOST_TRIES):
             signs = _flips_under(part, self.bars, max(SAMPLE, wanted), rng)
             power = part.periods(signs)
             for row in np.flatnonzero(self._peaks(power + others) <= self.bars.peak_of_part):
+                signs[row] *= signs[row, 0]  # a flip and its opposite are one entry
                 kept[signs[row].astype(np.int8).tobytes()] = (signs[row], power[row])
             if len(kept) >= wanted:
                 break
