@@ -31,9 +31,11 @@ Drawn = Any  # what a list draws: numbers of listed flips (n,), or fresh signs (
 
 BATCH = 4096
 TRIALS = 16384  # random flips that set the bars
-EFFECT_SHARE = 0.05  # share of random flips of a part that may pass the bars on its single effects
+EFFECT_SHARE = 0.02  # share of random flips of a part that may pass the bars on its single effects
 ONE_PART_SHARE = 0.002  # a night of one part has no later choice: be choosier,
 LEAST_LOG2 = 20.0  # but leave at least a million members
+LEAST_OF_PART = 4.0  # and at least 16 flips of a part with few units
+ROUNDING = 1e-5  # above a bar: figures summed in another order, some in single precision
 PEAK_SHARE = 0.1  # share of those that may pass the bar on the peak with the other parts at their mean
 SAMPLE = 512  # flips of a part that set that bar
 LISTED_LOG2 = 26  # members of the product of all lists, at least: a set of a million leaves room for the bars
@@ -298,7 +300,11 @@ class RestrictedSet:
         if not self._parts:
             return self.bars
         figures = self._figures([one.draw(BATCH, rng) for one in self._lists])
-        additive, coupled, peak = (float(np.quantile(figures[:, k], share)) for k, share in enumerate(NIGHT_SHARES))
+        least = LEAST_LOG2 - sum(one.log2_size for one in self._lists)
+        additive, coupled, peak = (
+            float(np.quantile(figures[:, k], _share(share, least), method="higher")) * (1 + ROUNDING)
+            for k, share in enumerate(NIGHT_SHARES)
+        )
         return replace(self.bars, additive_mean=additive, coupled_mean=coupled, any_period_peak=peak)
 
     def _measure(self, rng: np.random.Generator) -> float:
@@ -323,6 +329,17 @@ def _keeps(part: FlipPart, signs: FloatArray, bars: Bars) -> BoolArray:
     return np.asarray((part.effects(signs) <= limit).all(axis=1))
 
 
+def _share(stated: float, log2_least: float) -> float:
+    """A share that may pass a bar: the stated one, or more where 2^log2_least says that too few would be left."""
+    return float(min(1.0, max(stated, 2.0**log2_least)))
+
+
+def _worst(part: FlipPart, signs: FloatArray) -> FloatArray:
+    """The worst additive and the worst coupled effect of each flip, (n_draw, 2)."""
+    values = part.effects(signs)
+    return np.column_stack([values[:, kind].max(axis=1, initial=0.0) for kind in (part.additive, ~part.additive)])
+
+
 def _flips_under(part: FlipPart, bars: Bars, n: int, rng: np.random.Generator) -> FloatArray:
     """n random flips of a part that keep its single effects under the bars, (n, n_unit)."""
     kept: list[FloatArray] = []
@@ -339,25 +356,20 @@ def _flips_under(part: FlipPart, bars: Bars, n: int, rng: np.random.Generator) -
 
 def _bars_on_effects(parts: list[FlipPart], night: FlipPart | None, rng: np.random.Generator) -> Bars:
     """Bars on single effects that a stated share of the random flips of each part passes."""
-    worst = {True: 0.0, False: 0.0}
+    bars = np.zeros(2)
     for part in parts:
         n = len(part.units)
-        share = min(1.0, max(ONE_PART_SHARE, 2.0 ** (LEAST_LOG2 - n))) if len(parts) == 1 else EFFECT_SHARE
-        values = part.effects(_coins(rng, TRIALS, n))
-        # the share is that of both bars together, so each alone is passed by more
-        for additive in (True, False):
-            mine = values[:, part.additive == additive]
-            if mine.shape[1]:
-                worst[additive] = max(worst[additive], float(np.quantile(mine.max(axis=1), share)))
+        share = _share(ONE_PART_SHARE, LEAST_LOG2 - n) if len(parts) == 1 else _share(EFFECT_SHARE, LEAST_OF_PART - n)
+        worst = _worst(part, _coins(rng, TRIALS, n))
+        usual = np.maximum(np.quantile(worst, share, axis=0), 1e-12)
+        # one factor for both bars, so that the share is that of both together
+        bars = np.maximum(bars, usual * np.quantile((worst / usual).max(axis=1), share, method="higher"))
     if night is not None:  # half of the flips may keep the whole night's effects under the bars
-        values = night.effects(_coins(rng, BATCH, len(night.units)))
-        for additive in (True, False):
-            mine = values[:, night.additive == additive].max(axis=1, initial=0.0)
-            worst[additive] = max(worst[additive], float(np.median(mine)))
+        bars = np.maximum(bars, np.median(_worst(night, _coins(rng, BATCH, len(night.units))), axis=0))
     infinite = float("inf")
     return Bars(
-        additive_worst=worst[True],
-        coupled_worst=worst[False],
+        additive_worst=float(bars[0]) * (1 + ROUNDING),
+        coupled_worst=float(bars[1]) * (1 + ROUNDING),
         peak_of_part=infinite,
         additive_mean=infinite,
         coupled_mean=infinite,
@@ -373,4 +385,8 @@ def _with_part_peak(
         (part.periods(_flips_under(part, bars, SAMPLE, rng)) + other).max(axis=1) / effects
         for part, other in zip(parts, others, strict=True)
     ]
-    return replace(bars, peak_of_part=max(float(np.quantile(peak, PEAK_SHARE)) for peak in peaks))
+    low = [
+        float(np.quantile(peak, _share(PEAK_SHARE, LEAST_OF_PART - len(part.units)), method="higher"))
+        for part, peak in zip(parts, peaks, strict=True)
+    ]
+    return replace(bars, peak_of_part=max(low) * (1 + ROUNDING))
