@@ -18,6 +18,7 @@ COMMANDS: dict[str, tuple[str, str]] = {
     "check": ("planner.cli.check", "Find every problem of a sequence or rig file"),
     "compile": ("planner.cli.compile", "Compile a sequence to its shots and timelines"),
     "allocate": ("planner.cli.allocate", "Share out rig time for a goal: holds and packets, proved"),
+    "forecast": ("planner.cli.forecast", "Forecast the errors of a night against time, with a band"),
     "order": ("planner.cli.order", "Put the shots of a sequence in a running order"),
     "timeline": ("planner.cli.timeline", "Draw the timeline of one shot"),
     "rehearse": ("planner.cli.rehearse", "Rehearse a whole night on the stand-in rig"),

@@ -264,10 +264,10 @@ def _slow_part(draft: "Draft", units: Units, shots: _Shots, grid: FloatArray) ->
         times, owner = shots.mid_s[effect.rows], unit[effect.rows]
         split = np.zeros((units.count, len(owner)))
         split[owner, np.arange(len(owner))] = effect.weights
-        features.append(_form(split, times, drifts.additive))
+        features.append(_taken_apart(_form(split, times, drifts.additive)))
         additive.append(True)
         u, v = coupled_pair(split, shots.phase_rad[effect.rows])
-        features.append(np.concatenate([_form(u, times, drifts.coupled), _form(v, times, drifts.coupled)], axis=1))
+        features.append(_taken_apart(_form(u, times, drifts.coupled) + _form(v, times, drifts.coupled)))
         additive.append(False)
         rhythm.append((split @ np.exp(1j * np.outer(times, grid))).astype(np.complex64))
     return [
@@ -282,12 +282,17 @@ def _slow_part(draft: "Draft", units: Units, shots: _Shots, grid: FloatArray) ->
 
 
 def _form(split: FloatArray, mid_s: FloatArray, prior: Prior) -> FloatArray:
-    """Features (n_unit, n_feature) whose squared sums give z'Qz: eigenvectors of Q times root eigenvalues."""
+    """Q (n_unit, n_unit) of the added variance z'Qz, for weights split by unit (n_unit, n_shot)."""
     sums = suffix_sums(split)
-    form = prior.rate * (sums * np.diff(mid_s, prepend=0.0)) @ sums.T
+    form: FloatArray = prior.rate * (sums * np.diff(mid_s, prepend=0.0)) @ sums.T
     if prior.periods_s:
         response = (split @ np.exp(1j * np.outer(mid_s, prior.omega))) * np.sqrt(prior.power)
         form = form + response.real @ response.real.T + response.imag @ response.imag.T
+    return form
+
+
+def _taken_apart(form: FloatArray) -> FloatArray:
+    """Features (n_unit, n_feature) whose squared sums give z'Qz, large ones first: eigenvectors times root values."""
     values, vectors = np.linalg.eigh(form)
-    kept = values > max(float(values[-1]), 0.0) * 1e-12
+    kept = np.flatnonzero(values > max(float(values[-1]), 0.0) * 1e-12)[::-1]
     return np.asarray(vectors[:, kept] * np.sqrt(values[kept]))

@@ -73,11 +73,11 @@ def lay_out(packets: Packets, table: ShotTable, sequence: Sequence, rng: np.rand
         dwell = np.zeros(len(order), dtype=np.int64)
         dwell_set = dwell
         settle = 0.0
-    extra = _warm_up(packets, order, sequence)
-    opened = np.zeros(len(order), dtype=np.bool_)
-    opened[0] = len(extra.row) > 0 and bool(slow)
-    before = np.zeros(len(order))
     opens = np.flatnonzero(np.diff(dwell, prepend=-1)) if slow else np.zeros(0, dtype=np.int64)
+    extra = _warm_up(packets, order, sequence, opens if settle > sequence.memory.fades_s else opens[:1])
+    opened = np.zeros(len(order), dtype=np.bool_)
+    opened[extra.before_packet[extra.boundary]] = True
+    before = np.zeros(len(order))
     before[opens] += settle
     np.add.at(before, extra.before_packet, table.duration_s[extra.row])
     busy = length[order] + before
@@ -91,16 +91,17 @@ def lay_out(packets: Packets, table: ShotTable, sequence: Sequence, rng: np.rand
     )
 
 
-def _warm_up(packets: Packets, order: IntArray, sequence: Sequence) -> Extra:
-    """Warm-up shots at the start of the night: the first packet's own shots, run before it and not counted."""
+def _warm_up(packets: Packets, order: IntArray, sequence: Sequence, opens: IntArray) -> Extra:
+    """Warm-up shots at the start of the night, and of the dwells that begin at `opens` (n_gap,) in the packet order:
+    the following packet's own shots, run before it and not counted."""
     count = sequence.memory.warm_up
-    first = int(order[0])
-    rows = packets.first[first] + np.arange(count) % packets.size[first]
+    gaps = opens if len(opens) else np.zeros(1, dtype=np.int64)
+    inside = np.tile(np.arange(count), len(gaps))
+    before = np.repeat(gaps, count)
+    chosen = order[before]
     return Extra(
-        row=rows.astype(np.int64),
-        kind=np.full(count, int(Kind.WARM_UP)),
-        before_packet=np.zeros(count, dtype=np.int64),
-        boundary=np.arange(count) == 0
-        if any(switch.slow for switch in sequence.switches.values())
-        else np.zeros(count, dtype=np.bool_),
+        row=(packets.first[chosen] + inside % packets.size[chosen]).astype(np.int64),
+        kind=np.full(len(before), int(Kind.WARM_UP)),
+        before_packet=before.astype(np.int64),
+        boundary=(inside == 0) & (len(opens) > 0),
     )

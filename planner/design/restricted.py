@@ -42,6 +42,9 @@ LISTED_LOG2 = 26  # members of the product of all lists, at least: a set of a mi
 LISTED = 256  # flips listed for a part, at least
 WHOLE = 12  # parts with so few units have all their flips looked at
 NIGHT_SHARES = (0.5, 0.5, 0.05)  # share of the product that may pass the bars on means (additive, coupled) and peak
+ONE_PART_SHARES = (0.9, 0.9, 0.5)  # the same where there is one part, whose flips cost more
+FEWEST = 8  # draws of the sample behind the bars that must pass them all: what can be drawn is never next to nothing
+LEADING = 4  # features that are looked at first
 HOT = 64  # frequencies with the highest mean power, looked at first
 MOST_TRIES = 4000  # batches before a draw gives up
 
@@ -50,8 +53,9 @@ MOST_TRIES = 4000  # batches before a draw gives up
 class FlipPart:
     """Units that meet in the same effects, and how signs turn into figures.
 
-    units: (n_unit,) numbers of the units. features: (n_effect, n_unit, n_feature): an effect's flip-dependent added
-    variance is the sum over features of (z @ feature)^2, plus constant (n_effect,). additive: (n_effect,) bool, else
+    units: (n_unit,) numbers of the units. features: (n_effect, n_unit, n_feature), large ones first where they are
+    many: an effect's flip-dependent added variance is the sum over features of (z @ feature)^2, plus constant
+    (n_effect,). additive: (n_effect,) bool, else
     coupled; effects with a coupled response hold its two quadratures one after the other in u, v pairs that are added.
     rhythm: (n_wanted, n_unit, n_frequency) complex responses at any period.
     """
@@ -67,6 +71,23 @@ class FlipPart:
         n_effect, n_unit, n_feature = self.features.shape
         flat = self.features.transpose(1, 0, 2).reshape(n_unit, n_effect * n_feature)
         return np.asarray(((signs @ flat) ** 2).reshape(len(signs), n_effect, n_feature).sum(axis=2) + self.constant)
+
+    def under(self, signs: FloatArray, bars: "Bars") -> BoolArray:
+        """Which flips (n_draw, n_unit) keep every single effect under its bar.
+
+        The first features of each effect alone bound it from below and turn most flips away.
+        """
+        limit = np.where(self.additive, bars.additive_worst, bars.coupled_worst)
+        n_effect, n_unit, n_feature = self.features.shape
+        left = np.arange(len(signs))
+        if n_feature > 2 * LEADING:
+            leading = self.features[:, :, :LEADING].astype(np.float32).transpose(1, 0, 2).reshape(n_unit, -1)
+            seen = (signs.astype(np.float32) @ leading) ** 2
+            least = seen.reshape(len(signs), n_effect, LEADING).sum(axis=2) + self.constant
+            left = np.flatnonzero((least <= limit * (1 + ROUNDING)).all(axis=1))
+        passed = np.zeros(len(signs), dtype=np.bool_)
+        passed[left] = (self.effects(signs[left]) <= limit).all(axis=1)
+        return passed
 
     def sums(self, signs: FloatArray) -> FloatArray:
         """Sum over the additive and over the coupled effects, (n_draw, 2)."""
@@ -139,7 +160,7 @@ class _Fresh:
         self._part, self._bars, self._hot = part, bars, hot
         passed = tried = 0
         while passed < 100 and tried < 50 * BATCH:
-            passed += int(_keeps(part, _coins(rng, BATCH, len(part.units)), bars).sum())
+            passed += int(part.under(_coins(rng, BATCH, len(part.units)), bars).sum())
             tried += BATCH
         self.log2_size = len(part.units) + log2(max(passed, 1) / tried)
 
@@ -147,7 +168,7 @@ class _Fresh:
         return _flips_under(self._part, self._bars, n, rng)
 
     def find(self, signs: FloatArray) -> tuple[FloatArray, BoolArray]:
-        return signs, _keeps(self._part, signs, self._bars)
+        return signs, self._part.under(signs, self._bars)
 
     def signs(self, drawn: FloatArray) -> FloatArray:
         return drawn
@@ -229,7 +250,7 @@ class RestrictedSet:
         if n <= WHOLE:
             half = np.arange(2 ** (n - 1))[:, None]  # the others are their opposites
             every: FloatArray = 1.0 - 2.0 * ((half >> np.arange(n)) & 1).astype(np.float64)
-            signs = every[_keeps(part, every, self.bars)]
+            signs = every[part.under(every, self.bars)]
             power = part.periods(signs)
             low = self._peaks(power + others) <= self.bars.peak_of_part
             return _Listed(part, signs[low], power[low], self._hot)
@@ -292,19 +313,33 @@ class RestrictedSet:
         if self._night is not None and len(left):
             mine = [one[left] for one in drawn]
             passed[left] = np.all(self._figures(mine) <= bars, axis=1)
-            passed[left] &= _keeps(self._night, self._signs(mine), self.bars)
+            passed[left] &= self._night.under(self._signs(mine), self.bars)
         return passed
 
     def _bars_on_night(self, rng: np.random.Generator) -> Bars:
         """The bars on means and peak, from draws of the product of lists."""
         if not self._parts:
             return self.bars
-        figures = self._figures([one.draw(BATCH, rng) for one in self._lists])
+        fresh = len(self._parts) == 1
+        drawn = [one.draw(SAMPLE if fresh else BATCH, rng) for one in self._lists]
+        figures = self._figures(drawn)
         least = LEAST_LOG2 - sum(one.log2_size for one in self._lists)
-        additive, coupled, peak = (
-            float(np.quantile(figures[:, k], _share(share, least), method="higher")) * (1 + ROUNDING)
-            for k, share in enumerate(NIGHT_SHARES)
-        )
+        allowed = np.ones(len(figures), dtype=np.bool_)
+        if self._night is not None:
+            allowed = self._night.under(self._signs(drawn), self.bars)
+            if allowed.sum() < FEWEST:  # the whole night's own effects ask for more than the parts can give
+                self.bars = _raised_for(self._night, self._signs(drawn), self.bars)
+                allowed = self._night.under(self._signs(drawn), self.bars)
+        shares = [_share(share, least) for share in (ONE_PART_SHARES if fresh else NIGHT_SHARES)]
+        while True:
+            additive, coupled, peak = (
+                float(np.quantile(figures[:, k], share, method="higher")) * (1 + ROUNDING)
+                for k, share in enumerate(shares)
+            )
+            passed = allowed & np.all(figures <= (additive, coupled, peak), axis=1)
+            if passed.sum() >= FEWEST or min(shares) >= 1.0:
+                break
+            shares = [min(1.0, 2 * share) for share in shares]
         return replace(self.bars, additive_mean=additive, coupled_mean=coupled, any_period_peak=peak)
 
     def _measure(self, rng: np.random.Generator) -> float:
@@ -312,21 +347,29 @@ class RestrictedSet:
         if not self._parts:
             return 0.0
         passed = tried = 0
+        batch = SAMPLE if len(self._parts) == 1 else BATCH
         while passed < 100 and tried < 50 * BATCH:
-            passed += int(self._under_bars([listed.draw(BATCH, rng) for listed in self._lists]).sum())
-            tried += BATCH
+            passed += int(self._under_bars([listed.draw(batch, rng) for listed in self._lists]).sum())
+            tried += batch
         return float(sum(listed.log2_size for listed in self._lists) + log2(max(passed, 1) / tried))
 
 
 def _coins(rng: np.random.Generator, n: int, units: int) -> FloatArray:
     """Random signs (n, units)."""
-    return np.where(rng.integers(0, 2, size=(n, units), dtype=np.int8) == 0, -1.0, 1.0)
+    bits = np.unpackbits(np.frombuffer(rng.bytes(n * (-(-units // 8))), dtype=np.uint8).reshape(n, -1), axis=1)
+    return 1.0 - 2.0 * bits[:, :units].astype(np.float64)
 
 
-def _keeps(part: FlipPart, signs: FloatArray, bars: Bars) -> BoolArray:
-    """Which flips (n, n_unit) keep every single effect of the part under its bar."""
-    limit = np.where(part.additive, bars.additive_worst, bars.coupled_worst)
-    return np.asarray((part.effects(signs) <= limit).all(axis=1))
+def _raised_for(night: FlipPart, signs: FloatArray, bars: Bars) -> Bars:
+    """Bars on single effects that half of these flips pass with the whole night's effects."""
+    values = night.effects(signs)
+    raised = {}
+    for name, mine in (("additive_worst", night.additive), ("coupled_worst", ~night.additive)):
+        if mine.any():
+            raised[name] = max(
+                getattr(bars, name), float(np.quantile(values[:, mine].max(axis=1), 0.75)) * (1 + ROUNDING)
+            )
+    return replace(bars, **raised)
 
 
 def _share(stated: float, log2_least: float) -> float:
@@ -346,7 +389,7 @@ def _flips_under(part: FlipPart, bars: Bars, n: int, rng: np.random.Generator) -
     missing = n
     for _ in range(MOST_TRIES):
         signs = _coins(rng, BATCH, len(part.units))
-        signs = signs[_keeps(part, signs, bars)][:missing]
+        signs = signs[part.under(signs, bars)][:missing]
         kept.append(signs)
         missing -= len(signs)
         if missing == 0:

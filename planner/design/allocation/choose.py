@@ -46,7 +46,7 @@ def allocate(
         return allocate_revival(
             known, hours, period_s=period, depth=depth, significance=details.get("significance", 0.01)
         )
-    scale = _scale(sequence, rig)
+    scale = scale_of(sequence, rig)
     if kind == "ladder":
         return _ladder(known, scale, hours, details.get("risk", RISK))
     if not sequence.goal.wanted:
@@ -80,7 +80,12 @@ def _swept_holds(sequence: Sequence) -> tuple[float, ...]:
     raise PlanImpossible(f'the goal "curve" needs the holds to be measured: a sweep of {name}')
 
 
-def _scale(sequence: Sequence, rig: Rig) -> Scale:
+def scale_of(sequence: Sequence, rig: Rig) -> Scale:
+    """Phase per signal of a sequence on its rig, along the vertical.
+
+    Raises:
+        PlanImpossible: no setting plays the separation.
+    """
     name = sequence.roles.get("separation")
     if name is None:
         raise PlanImpossible("this goal needs the scale factor: declare roles.separation")
