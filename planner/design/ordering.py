@@ -258,7 +258,9 @@ def _notes(allowed: RestrictedSet | None, units: "flips.Units") -> dict[str, Any
     notes: dict[str, Any] = {"flipped_switch": units.switch, "units": units.count}
     if allowed is not None:
         notes["log2_members"] = round(allowed.log2_size, 2)
-        notes["bars"] = {name: float(value) for name, value in vars(allowed.bars).items()}
+        # a bar that asks for nothing is infinite, which no logbook and no JSON can hold: left out
+        bars = {name: float(value) for name, value in vars(allowed.bars).items()}
+        notes["bars"] = {name: value for name, value in bars.items() if np.isfinite(value)}
     return notes
 
 
