@@ -72,7 +72,11 @@ def test_a_rig_ends_in_good_order(tmp_path: Path, how: str) -> None:
             server.process.stdin = None
         else:
             server.process.send_signal(getattr(signal, how))
-        assert server.ended() == (0, "")
+        code, said = server.ended()
+        assert code == 0
+        # on a loaded machine asyncio's own SIGINT handling may cancel the web server's wait for its shutdown message,
+        # which that server then logs; nothing is lost by it, and nothing else may be said
+        assert said == "" or (how == "SIGINT" and said.rstrip().endswith("asyncio.exceptions.CancelledError"))
         with pytest.raises(LinkError):
             rig.now()
 
