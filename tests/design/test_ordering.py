@@ -8,7 +8,7 @@ from planner.design.running_order import Kind, RunningOrder
 from planner.errors import PlanImpossible
 from planner.sequence.model import Sequence
 from planner.sequence.table import ShotTable
-from tests.design.nights import night, night_a, night_b
+from tests.design.nights import night, night_a, night_b, small_night
 
 
 def measured(order: RunningOrder) -> np.ndarray:
@@ -33,7 +33,7 @@ def test_every_shot_once_and_packets_whole(night: tuple[ShotTable, Sequence]) ->
 
 def test_the_same_seed_gives_the_same_order_and_another_seed_another() -> None:
     """Bytes, not only figures."""
-    table, sequence = night_a(4)
+    table, sequence = small_night()
     first, again, other = (make_order(table, sequence, seed=seed) for seed in (5, 5, 6))
     for name in ("shot", "kind", "start_s", "settle_s", "packet", "unit", "flip"):
         assert getattr(first, name).tobytes() == getattr(again, name).tobytes()

@@ -42,7 +42,7 @@ def test_packets_of_a_night_with_dwells_are_uniform_too() -> None:
 
 def test_two_packets_come_in_either_order() -> None:
     """Of two packets of different cells each is first in half of the draws."""
-    found, point = places(night_a(), DRAWS)
+    found, point = places(night_a(4), DRAWS)
     one, other = (int(np.flatnonzero(point == cell)[3]) for cell in (0, 11))
     first = int((found[:, one] < found[:, other]).sum())
     assert stats.binomtest(first, DRAWS).pvalue > 1e-4
