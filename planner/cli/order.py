@@ -33,7 +33,8 @@ def command(
     The figures are the variance that drift adds to what the night estimates, in units of single-shot noise, beside
     those of the same shots shuffled and swept; 0.04 widens an error bar by 2 percent. The CSV holds start_s (after any
     settle wait), duration_s, hold_s, phase_deg, switch_NAME (+1 for the first state), every setting in its own unit,
-    and kind (0 measured, 1 warm-up, 2 check), packet, cell, repeat, unit (block of the last draw).
+    and settle_s (the wait before the shot), kind (0 measured, 1 warm-up, 2 check), packet, cell, repeat, unit (block of
+    the last draw).
     """
     from planner.design.compare import parity_figures, shuffled_and_swept
     from planner.design.drift import drifts_of
@@ -54,7 +55,7 @@ def command(
     compiled = compile_sequence(sequence, rig)
     order = make_order(compiled.table, sequence, seed=seed, effort="quick" if quick else "full")
     check_order_limits(compiled, rig, order.start_s, order.shot, settle_s=order.settle_s)
-    drifts = drifts_of(sequence, float(compiled.table.duration_s.sum()))
+    drifts = drifts_of(sequence, compiled.table)
     others = shuffled_and_swept(compiled.table, sequence, drifts, seed=seed)
     parities = parity_figures(compiled.table, sequence, order)
     if out is not None:
@@ -159,16 +160,20 @@ def write_order(
         "phase_deg": np.rad2deg(table.phase_rad[rows]).round(9),
     }
     columns |= {f"switch_{name}": states[rows] for name, states in table.switches.items()}
-    for name, values in table.settings.items():
-        unit = sequence.settings[name].unit
-        columns[f"{name}_{unit}".rstrip("_")] = np.asarray(to_unit(values[rows], unit))
     columns |= {
+        "settle_s": order.settle_s[keep],
         "kind": order.kind[keep],
         "packet": order.packet[keep],
         "cell": table.cell[rows],
         "repeat": table.repeat[rows],
         "unit": order.unit[keep],
     }
+    for name, values in table.settings.items():
+        unit = sequence.settings[name].unit
+        heading = f"{name}_{unit}".rstrip("_")
+        if heading in columns and (name, heading) != (sequence.roles["hold"], "hold_s"):
+            heading = f"setting_{heading}"  # a setting called "start" is not the start of a shot
+        columns[heading] = np.asarray(to_unit(values[rows], unit))
     rows_out = zip(*(column.tolist() for column in columns.values()), strict=True)
     lines = [",".join(columns), *(",".join(repr(value) for value in row) for row in rows_out)]
     try:

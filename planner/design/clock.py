@@ -7,13 +7,16 @@ from planner.sequence.model import Sequence
 from planner.sequence.table import ShotTable
 
 
-def settle_waits(table: ShotTable, sequence: Sequence, rows: IntArray, boundary: BoolArray) -> FloatArray:
+def settle_waits(
+    table: ShotTable, sequence: Sequence, rows: IntArray, boundary: BoolArray, opens: BoolArray
+) -> FloatArray:
     """Wait in seconds before each shot of an order, (n_position,).
 
     rows (n_position,): table rows in running order; boundary (n_position,): first shot of a dwell of the slow
-    switches, where the slow switches' settle time is waited whether they flip or not, so that the wait can tell
-    nothing. Fast switches and settings with a settle time wait where they change. Waits run side by side: the longest
-    counts.
+    switches; opens (n_position,): first shot of a packet. Slow switches wait at every boundary, fast ones at the start
+    of every packet, whether they flip there or not, so that the wait can tell nothing and the last draw moves no time.
+    Inside packets fast switches wait where they change, and settings with a settle time wait where they change
+    anywhere. Waits run side by side: the longest counts.
     """
     wait = np.zeros(len(rows))
     for name, switch in sequence.switches.items():
@@ -23,7 +26,7 @@ def settle_waits(table: ShotTable, sequence: Sequence, rows: IntArray, boundary:
             waits = boundary
         else:
             states = table.switches[name][rows]
-            waits = np.r_[True, states[1:] != states[:-1]]
+            waits = opens | np.r_[True, states[1:] != states[:-1]]
         wait[waits] = np.maximum(wait[waits], switch.settle_s)
     for name, setting in sequence.settings.items():
         if setting.settle_s > 0.0:

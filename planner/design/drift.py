@@ -13,7 +13,9 @@ from dataclasses import dataclass
 import numpy as np
 
 from planner.arrays import FloatArray
+from planner.design.acceleration import noise_per_acceleration
 from planner.sequence.model import Drift, Sequence
+from planner.sequence.table import ShotTable
 
 SIDEREAL_DAY_S = 86164.0  # rotation of the Earth
 M2_S = 44714.0  # the principal lunar tide, 12.4206 h
@@ -47,6 +49,9 @@ class Prior:
         return Prior(rate=self.rate)
 
 
+NONE = Prior(rate=0.0)
+
+
 def reference_prior(total_s: float, wander: float = 5.0) -> Prior:
     """What is assumed where a sequence declares nothing: a walk that reaches five times the single-shot noise by the
     end of the night, a sidereal day and the principal tide of the same size, and the room's air handling at one."""
@@ -57,24 +62,52 @@ def reference_prior(total_s: float, wander: float = 5.0) -> Prior:
 
 @dataclass(frozen=True, kw_only=True)
 class Drifts:
-    """The drift a plan must withstand: additive, and coupled to the fringe (phase and contrast together)."""
+    """The drift a plan must withstand: additive, and coupled to the fringe (phase and contrast together).
+
+    `acceleration` is a prior in (m/s^2) in place of single-shot noise; `per_acceleration` (n_shot,), along the shot
+    table, turns it into coupled drift; None where no such drift is declared.
+    """
 
     additive: Prior
     coupled: Prior
+    acceleration: Prior = NONE
+    per_acceleration: FloatArray | None = None
+
+    def coupled_at(self, row: int) -> Prior:
+        """Coupled drift of shots like the table's row `row`, that of the acceleration with it."""
+        if self.per_acceleration is None:
+            return self.coupled
+        factor = float(self.per_acceleration[row])
+        return Prior(
+            rate=self.coupled.rate + self.acceleration.rate * factor**2,
+            periods_s=self.coupled.periods_s + self.acceleration.periods_s,
+            amplitudes=self.coupled.amplitudes + tuple(factor * size for size in self.acceleration.amplitudes),
+        )
+
+    @property
+    def omega(self) -> FloatArray:
+        """Angular frequencies of all declared rhythms, rising, rad/s."""
+        return np.unique(np.concatenate([self.additive.omega, self.coupled.omega, self.acceleration.omega]))
 
 
-def drifts_of(sequence: Sequence, total_s: float) -> Drifts:
-    """The declared drift of a sequence for a night of `total_s`; the reference prior for a kind that is not declared.
+def drifts_of(sequence: Sequence, table: ShotTable) -> Drifts:
+    """The declared drift of a sequence; the reference prior for a kind that is not declared, none of the acceleration.
 
     Phase and contrast reach a fringe through its two quadratures; a plan that is safe for the worst fringe phase
-    covers both, so their priors are added. Drift of acceleration is phase drift that grows with the hold; it enters
-    through `acceleration_scale` of the caller.
+    covers both, so their priors are added.
+
+    Raises:
+        PlanImpossible: drift of the acceleration is declared, and nothing to weigh it by (see acceleration.py).
     """
     additive = [drift for drift in sequence.drift if drift.kind == "additive"]
     coupled = [drift for drift in sequence.drift if drift.kind in ("phase", "contrast")]
-    reference = reference_prior(total_s)
+    acceleration = [drift for drift in sequence.drift if drift.kind == "acceleration"]
+    reference = reference_prior(float(table.duration_s.sum()))
     return Drifts(
-        additive=_prior(additive) if additive else reference, coupled=_prior(coupled) if coupled else reference
+        additive=_prior(additive) if additive else reference,
+        coupled=_prior(coupled) if coupled else reference,
+        acceleration=_prior(acceleration),
+        per_acceleration=noise_per_acceleration(table, sequence) if acceleration else None,
     )
 
 
@@ -103,14 +136,24 @@ def added_variance(weights: FloatArray, mid_s: FloatArray, prior: Prior) -> Floa
     return np.asarray(out)
 
 
-def coupled_variance(u: FloatArray, v: FloatArray, mid_s: FloatArray, prior: Prior) -> FloatArray:
-    """The worst over the fringe phase of (cos u + sin v)'K(cos u + sin v), for u, v (..., n_shot): a top eigenvalue."""
-    uu, vv = added_variance(u, mid_s, prior), added_variance(v, mid_s, prior)
+def coupled_form(u: FloatArray, v: FloatArray, mid_s: FloatArray, prior: Prior) -> FloatArray:
+    """u'Ku, v'Kv and u'Kv for u, v (..., n_shot): (3, ...)."""
     uv = prior.rate * ((suffix_sums(u) * suffix_sums(v)) @ np.diff(mid_s, prepend=0.0))
     if prior.periods_s:
         turning = np.exp(1j * np.outer(mid_s, prior.omega))
         uv = uv + np.real((u @ turning) * np.conj(v @ turning)) @ prior.power
+    return np.array([added_variance(u, mid_s, prior), added_variance(v, mid_s, prior), uv])
+
+
+def at_worst_phase(form: FloatArray) -> FloatArray:
+    """The worst over the fringe phase of (cos u + sin v)'K(cos u + sin v): the top eigenvalue of a form (3, ...)."""
+    uu, vv, uv = form
     return np.asarray((uu + vv) / 2 + np.sqrt(((uu - vv) / 2) ** 2 + uv**2))
+
+
+def coupled_variance(u: FloatArray, v: FloatArray, mid_s: FloatArray, prior: Prior) -> FloatArray:
+    """Added variance of a coupled response at its worst fringe phase, for u, v (..., n_shot)."""
+    return at_worst_phase(coupled_form(u, v, mid_s, prior))
 
 
 def period_grid(total_s: float, most: int = 4000) -> FloatArray:

@@ -9,7 +9,7 @@ import numpy as np
 from planner.arrays import FloatArray, IntArray, SignArray
 from planner.design.arrangements import walk_cost
 from planner.design.drift import Prior, added_variance, period_grid, suffix_sums
-from planner.design.effects import coupled_pair, effects_of
+from planner.design.effects import Effect, coupled_pair, effects_of
 from planner.design.quality import any_period
 from planner.design.restricted import FlipPart, RestrictedSet
 from planner.sequence.model import Sequence
@@ -151,6 +151,17 @@ class _Shots:
         self.phase_rad = draft.table.phase_rad[rows]
         switches = {name: states[rows] for name, states in draft.table.switches.items()}
         self.effects = list(effects_of(np.repeat(packets.point[layout.packet], sizes), self.phase_rad, switches))
+        self._drifts = draft.drifts
+        factor = draft.drifts.per_acceleration
+        self._factor = None if factor is None else factor[rows]
+
+    def coupled(self, effect: Effect, weights: FloatArray) -> list[tuple[FloatArray, Prior]]:
+        """What coupled drift meets in weights (..., n_row) of an effect, and which drift: two quadratures each."""
+        pair = coupled_pair(weights, self.phase_rad[effect.rows])
+        met = [(row, self._drifts.coupled) for row in pair]
+        if self._factor is not None:
+            met += [(row * self._factor[effect.rows], self._drifts.acceleration) for row in pair]
+        return met
 
 
 def _rhythms(draft: "Draft", met: float) -> FloatArray:
@@ -177,7 +188,8 @@ def _fast_parts(draft: "Draft", grid: FloatArray) -> list[FlipPart]:
         weights = one.patterns.rows[picked][:, arrangements] / np.sqrt(len(places))  # (pattern, unit, size)
         walk = walk_cost(one.patterns.rows[picked], arrangements).mean(axis=1) * one.cycle_s
         is_coupled = one.patterns.coupled[picked]
-        walk *= np.where(is_coupled, drifts.coupled.rate, drifts.additive.rate)
+        coupled_prior = drifts.coupled_at(int(packets.first[layout.packet[places[0]]]))
+        walk *= np.where(is_coupled, coupled_prior.rate, drifts.additive.rate)
         inside: FloatArray = (np.arange(arrangements.shape[1], dtype=np.float64) + 0.5) * one.cycle_s
         features: list[FloatArray] = []
         constant: list[float] = []
@@ -187,7 +199,7 @@ def _fast_parts(draft: "Draft", grid: FloatArray) -> list[FlipPart]:
             signed = weights * slow[places, parity][None, :, None]
             for effect in np.unique(one.patterns.effect[picked]):
                 mine = one.patterns.effect[picked] == effect
-                for prior, kind in ((drifts.additive, False), (drifts.coupled, True)):
+                for prior, kind in ((drifts.additive, False), (coupled_prior, True)):
                     rows = np.flatnonzero(mine & (is_coupled == kind))
                     if not len(rows):
                         continue
@@ -225,12 +237,11 @@ def _night_part(draft: "Draft", units: Units, shots: _Shots, grid: FloatArray) -
     for effect in shots.effects:
         if effect.point >= 0 or units.switch not in effect.parity:
             continue
-        pair = coupled_pair(effect.weights, shots.phase_rad)
-        for prior, rows in ((draft.drifts.additive, (effect.weights,)), (draft.drifts.coupled, pair)):
-            heard = [per_unit(row, prior.omega) * np.sqrt(prior.power) for row in rows]
-            features.append(np.concatenate([np.concatenate([one.real, one.imag], axis=1) for one in heard], axis=1))
-            constant.append(sum(float(added_variance(row, shots.mid_s, prior.walk)) for row in rows))
-            additive.append(len(rows) == 1)
+        for heard in ([(effect.weights, draft.drifts.additive)], shots.coupled(effect, effect.weights)):
+            responses = [per_unit(row, prior.omega) * np.sqrt(prior.power) for row, prior in heard]
+            features.append(np.concatenate([part for one in responses for part in (one.real, one.imag)], axis=1))
+            constant.append(sum(float(added_variance(row, shots.mid_s, prior.walk)) for row, prior in heard))
+            additive.append(len(heard) == 1)
         chunks = np.array_split(grid, max(1, len(grid) * len(shots.mid_s) // 4_000_000))
         rhythm.append(np.concatenate([per_unit(effect.weights, some).astype(np.complex64) for some in chunks], axis=1))
     return FlipPart(
@@ -266,8 +277,8 @@ def _slow_part(draft: "Draft", units: Units, shots: _Shots, grid: FloatArray) ->
         split[owner, np.arange(len(owner))] = effect.weights
         features.append(_taken_apart(_form(split, times, drifts.additive)))
         additive.append(True)
-        u, v = coupled_pair(split, shots.phase_rad[effect.rows])
-        features.append(_taken_apart(_form(u, times, drifts.coupled) + _form(v, times, drifts.coupled)))
+        forms = [_form(row, times, prior) for row, prior in shots.coupled(effect, split)]
+        features.append(_taken_apart(np.sum(forms, axis=0)))
         additive.append(False)
         rhythm.append((split @ np.exp(1j * np.outer(times, grid))).astype(np.complex64))
     return [

@@ -21,7 +21,7 @@ from planner.design import flips
 from planner.design.arrangements import Patterns, Score, best_arrangements, patterns_of
 from planner.design.choosing import Shape, choose, limits_for
 from planner.design.clock import settle_waits, starts
-from planner.design.drift import Drifts, drifts_of, period_grid
+from planner.design.drift import Drifts, Prior, drifts_of, period_grid
 from planner.design.layout import Layout, lay_out
 from planner.design.packets import Packets, find_packets
 from planner.design.quality import Quality, assess
@@ -122,8 +122,8 @@ def draft_order(
     layout = lay_out(packets, table, sequence, streams[0])
     wanted = flips.flipping_switch(sequence)
     total = float(table.duration_s.sum())
-    drifts = drifts_of(sequence, total)
-    omega = np.union1d(drifts.additive.omega, drifts.coupled.omega)
+    drifts = drifts_of(sequence, table)
+    omega = drifts.omega
     shapes = {
         int(number): _shape(table, sequence, packets, int(number), wanted, drifts, omega, streams[1])
         for number in np.unique(packets.shape)
@@ -192,25 +192,24 @@ def _shape(
     }
     slow = sum(switch.slow for switch in sequence.switches.values())
     patterns = patterns_of(table.phase_rad[rows], fast, slow, wanted)
-    power = _powers(patterns, drifts, omega)
-    rates = np.where(patterns.coupled, drifts.coupled.rate, drifts.additive.rate)
+    prior = drifts.coupled_at(first)
+    power = _powers(patterns, drifts.additive, prior, omega)
+    rates = np.where(patterns.coupled, prior.rate, drifts.additive.rate)
     score = Score(patterns, cycle_s=float(packets.cycle_s[one]), rates=rates, omega=omega, power=power)
     size, _ = limits_for(len(packets), len(patterns.importance))
     pool, scores = best_arrangements(score, int(packets.size[one]), size, rng)
     return Shape(patterns=patterns, pool=pool, scores=scores, cycle_s=float(packets.cycle_s[one]), power=power)
 
 
-def _powers(patterns: Patterns, drifts: Drifts, omega: FloatArray) -> FloatArray:
+def _powers(patterns: Patterns, additive: Prior, coupled: Prior, omega: FloatArray) -> FloatArray:
     """Squared amplitudes of the declared rhythms for each pattern, (n_pattern, n_period)."""
 
-    def on_grid(prior_omega: FloatArray, power: FloatArray) -> FloatArray:
+    def on_grid(prior: Prior) -> FloatArray:
         out = np.zeros(len(omega))
-        out[np.searchsorted(omega, prior_omega)] = power
+        np.add.at(out, np.searchsorted(omega, prior.omega), prior.power)
         return out
 
-    additive = on_grid(drifts.additive.omega, drifts.additive.power)
-    coupled = on_grid(drifts.coupled.omega, drifts.coupled.power)
-    return np.asarray(np.where(patterns.coupled[:, None], coupled, additive))
+    return np.asarray(np.where(patterns.coupled[:, None], on_grid(coupled), on_grid(additive)))
 
 
 def assemble(
@@ -222,13 +221,16 @@ def assemble(
     rows, sign = flips.flipped_rows(draft, units, signs)
     sizes = draft.packets.size[layout.packet]
     packet = np.repeat(np.arange(len(sizes)), sizes)
+    unit = units.of_packet[packet]
     first_of_packet = np.cumsum(sizes) - sizes
     extra = layout.extra
     at = first_of_packet[extra.before_packet] if len(extra.row) else np.zeros(0, dtype=np.int64)
     everything = np.insert(rows, at, extra.row)
     kind = np.insert(np.full(len(rows), int(Kind.MEASURE)), at, extra.kind)
     boundary = np.insert(_boundaries(layout, first_of_packet, len(rows)), at, extra.boundary)
-    settle = settle_waits(table, sequence, everything, boundary)
+    packet = np.insert(packet, at, -1)
+    opens = np.diff(packet, prepend=-2) != 0
+    settle = settle_waits(table, sequence, everything, boundary, opens)
     duration = table.duration_s[everything]
     start = starts(duration, settle)
     return RunningOrder(
@@ -238,8 +240,8 @@ def assemble(
         start_s=start,
         settle_s=settle,
         duration_s=duration,
-        packet=np.insert(packet, at, -1),
-        unit=np.insert(units.of_packet[packet], at, -1),
+        packet=packet,
+        unit=np.insert(unit, at, -1),
         flip=np.insert(sign, at, 1).astype(np.int8),
         seed=seed,
         figures=judge(table, sequence, everything, start + settle + duration / 2, kind, draft.drifts).figures(),
@@ -267,7 +269,7 @@ def _notes(allowed: RestrictedSet | None, units: "flips.Units") -> dict[str, Any
 def quality_of(order: RunningOrder, table: ShotTable, sequence: Sequence) -> Quality:
     """The quality of an order of one sequence, effect by effect."""
     mid = order.start_s + order.settle_s + order.duration_s / 2
-    return judge(table, sequence, order.shot, mid, order.kind, drifts_of(sequence, float(table.duration_s.sum())))
+    return judge(table, sequence, order.shot, mid, order.kind, drifts_of(sequence, table))
 
 
 def judge(
@@ -285,5 +287,6 @@ def judge(
         phase_rad=table.phase_rad[mine],
         switches={name: states[mine] for name, states in table.switches.items()},
         drifts=drifts,
+        per_acceleration=None if drifts.per_acceleration is None else drifts.per_acceleration[mine],
         most_frequencies=4000 if len(mine) < 30_000 else 400,
     )

@@ -18,7 +18,7 @@ from math import sqrt
 import numpy as np
 
 from planner.arrays import FloatArray, IntArray, SignArray
-from planner.design.drift import Drifts, added_variance, coupled_variance, period_grid
+from planner.design.drift import Drifts, added_variance, at_worst_phase, coupled_form, period_grid
 from planner.design.effects import Effect, coupled_pair, effects_of
 
 FREQUENCIES_AT_ONCE = 64  # keeps the table of turning phases of 200,000 shots under 100 MB
@@ -78,9 +78,13 @@ def assess(
     phase_rad: FloatArray,
     switches: Mapping[str, SignArray],
     drifts: Drifts,
+    per_acceleration: FloatArray | None = None,
     most_frequencies: int = 4000,
 ) -> Quality:
-    """Judge shots in running order; every array has shape (n_shot,), mid_s rising."""
+    """Judge shots in running order; every array has shape (n_shot,), mid_s rising.
+
+    per_acceleration: that of `drifts`, in running order.
+    """
     effects = list(effects_of(point, phase_rad, switches))
     additive: dict[str, float] = {}
     coupled: dict[str, float] = {}
@@ -89,7 +93,11 @@ def assess(
         additive[effect.name] = float(added_variance(effect.weights, times, drifts.additive))
         if effect.parity:
             u, v = coupled_pair(effect.weights, phase_rad[effect.rows])
-            coupled[effect.name] = float(coupled_variance(u, v, times, drifts.coupled))
+            form = coupled_form(u, v, times, drifts.coupled)
+            if per_acceleration is not None:
+                factor = per_acceleration[effect.rows]
+                form = form + coupled_form(u * factor, v * factor, times, drifts.acceleration)
+            coupled[effect.name] = float(at_worst_phase(form))
     grid = period_grid(total_s, most_frequencies)
     power = any_period(effects, mid_s, grid)
     worst = int(power.argmax())

@@ -46,6 +46,7 @@ ONE_PART_SHARES = (0.9, 0.9, 0.5)  # the same where there is one part, whose fli
 FEWEST = 8  # draws of the sample behind the bars that must pass them all: what can be drawn is never next to nothing
 LEADING = 4  # features that are looked at first
 HOT = 64  # frequencies with the highest mean power, looked at first
+SIGNS_AT_ONCE = 20_000_000  # numbers: 160 MB of signs of a whole night
 MOST_TRIES = 4000  # batches before a draw gives up
 
 
@@ -321,7 +322,7 @@ class RestrictedSet:
         if not self._parts:
             return self.bars
         fresh = len(self._parts) == 1
-        drawn = [one.draw(SAMPLE if fresh else BATCH, rng) for one in self._lists]
+        drawn = [one.draw(SAMPLE if fresh else _sample(self.n_unit), rng) for one in self._lists]
         figures = self._figures(drawn)
         least = LEAST_LOG2 - sum(one.log2_size for one in self._lists)
         allowed = np.ones(len(figures), dtype=np.bool_)
@@ -352,6 +353,11 @@ class RestrictedSet:
             passed += int(self._under_bars([listed.draw(batch, rng) for listed in self._lists]).sum())
             tried += batch
         return float(sum(listed.log2_size for listed in self._lists) + log2(max(passed, 1) / tried))
+
+
+def _sample(units: int) -> int:
+    """How many flips of a whole night stand for all: BATCH, fewer where a night has very many units."""
+    return max(SAMPLE, min(BATCH, SIGNS_AT_ONCE // max(1, units)))
 
 
 def _coins(rng: np.random.Generator, n: int, units: int) -> FloatArray:
@@ -408,7 +414,9 @@ def _bars_on_effects(parts: list[FlipPart], night: FlipPart | None, rng: np.rand
         # one factor for both bars, so that the share is that of both together
         bars = np.maximum(bars, usual * np.quantile((worst / usual).max(axis=1), share, method="higher"))
     if night is not None:  # half of the flips may keep the whole night's effects under the bars
-        bars = np.maximum(bars, np.median(_worst(night, _coins(rng, BATCH, len(night.units))), axis=0))
+        bars = np.maximum(
+            bars, np.median(_worst(night, _coins(rng, _sample(len(night.units)), len(night.units))), axis=0)
+        )
     infinite = float("inf")
     return Bars(
         additive_worst=float(bars[0]) * (1 + ROUNDING),

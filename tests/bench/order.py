@@ -39,7 +39,7 @@ rng = np.random.default_rng(1)
 packets = len(table) // 8
 rows = (8 * rng.permutation(packets)[:, None] + rng.permuted(np.tile(np.arange(8), (packets, 1)), axis=1)).ravel()
 mid = np.cumsum(table.duration_s[rows]) - table.duration_s[rows] / 2
-drifts = drifts_of(sequence, float(table.duration_s.sum()))
+drifts = drifts_of(sequence, table)
 said["shuffled"] = judge(table, sequence, rows, mid, np.zeros(len(rows), dtype=np.int64), drifts).figures()
 print(json.dumps(said))
 """

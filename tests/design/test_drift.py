@@ -1,11 +1,15 @@
 """Added variance by sums that take time linear in the number of shots, against the covariance matrix itself."""
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
 from planner.design.drift import Prior, added_variance, coupled_variance, drifts_of, period_grid, reference_prior
+from planner.errors import PlanImpossible
+from planner.sequence.model import Expected
 from tests.design.nights import night
 
 PRIOR = Prior(rate=2e-3, periods_s=(86164.0, 1200.0), amplitudes=(5.0, 0.7))
@@ -58,12 +62,46 @@ def test_simulated_drift_has_the_stated_variance() -> None:
 
 def test_declared_drift_becomes_the_prior_and_missing_kinds_the_reference() -> None:
     """Phase and contrast drift add up; a kind that is not declared is taken as the reference."""
-    _, sequence = night("reference-night-a.toml")
-    drifts = drifts_of(sequence, 36000.0)
+    table, sequence = night("reference-night-a.toml")
+    drifts = drifts_of(sequence, table)
     assert drifts.additive == drifts.coupled
     assert drifts.additive.rate == pytest.approx(25.0 / sequence.drift[0].wander_over_s)
-    bare = drifts_of(type(sequence)(**{**vars(sequence), "drift": ()}), 36000.0)
-    assert bare.additive == reference_prior(36000.0)
+    bare = drifts_of(replace(sequence, drift=()), table)
+    assert bare.additive == reference_prior(float(table.duration_s.sum()))
+    assert bare.per_acceleration is None
+
+
+def test_acceleration_moves_a_shot_by_its_scale_factor() -> None:
+    """A small acceleration at mid-fringe moves the fraction by as many single-shot noises as the factor says."""
+    # source: mass of Rb-87 86.909180531 u and the constants of CODATA 2018, from memory; trapezoid of separation
+    table, sequence = night("signal.toml")
+    factor = drifts_of(sequence, table).per_acceleration
+    assert factor is not None
+    mass, hbar = 86.909180531 * 1.66053906660e-27, 1.054571817e-34
+    separation = table.settings[sequence.roles["separation"]]
+    kappa = mass / hbar * separation * (table.hold_s + table.settings[sequence.roles["split"]])
+    expected = sequence.expected
+    assert expected.contrast
+    assert expected.atoms
+    assert expected.lifetime_s
+    assert expected.coherence_constant
+    coherence = expected.coherence_constant[0] / (table.settings[sequence.roles["depth"]] * separation)
+    contrast = expected.contrast[0] * np.exp(-table.hold_s / coherence)
+    atoms = expected.atoms[0] * np.exp(-table.hold_s / expected.lifetime_s[0])
+    assert expected.excess_noise is not None
+    sigma = np.sqrt(expected.excess_noise[0] * (1 - contrast**2 / 2) / (4 * atoms))
+    small = 1e-12
+    moved = contrast / 2 * (np.sin(kappa * small) - np.sin(-kappa * small)) / (2 * small)
+    # sqrt2 is the coupled response's own peak; sin is straight to 1e-9 here
+    assert factor * np.sqrt(2) * sigma == pytest.approx(moved, rel=1e-7)
+
+
+def test_acceleration_needs_something_to_weigh_it_by() -> None:
+    """Without contrast and atoms an acceleration is no multiple of a shot's noise; the message names what to say."""
+    table, sequence = night("signal.toml")
+    bare = replace(sequence, expected=Expected())
+    with pytest.raises(PlanImpossible, match=r"expected\.contrast"):
+        drifts_of(bare, table)
 
 
 def test_the_period_grid_covers_twelve_hours_to_two_minutes() -> None:

@@ -1,9 +1,11 @@
 """Running orders: every shot once, packets whole, dwells unbroken, times that add up, figures under their bounds."""
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 
-from planner.design.ordering import make_order, quality_of
+from planner.design.ordering import assemble, draft_order, make_order, quality_of
 from planner.design.running_order import Kind, RunningOrder
 from planner.errors import PlanImpossible
 from planner.sequence.model import Sequence
@@ -128,6 +130,22 @@ def test_each_gap_that_memory_outlasts_is_followed_by_warm_up() -> None:
     assert warm[waits + 1].all()
     state = table.switches["collar"][order.shot]
     assert (state[waits] == state[waits + 2]).all()
+
+
+def test_the_last_draw_moves_no_time_where_a_fast_switch_settles() -> None:
+    """Fast switches wait at the start of every packet and inside where they change, so that flips leave every start."""
+    table, sequence = night("reference-night-a.toml", ("repeats = 22", "repeats = 2"))
+    kick = replace(sequence.switches["kick"], settle_s=0.5)
+    sequence = replace(sequence, switches={"kick": kick})
+    draft = draft_order(table, sequence, seed=3, effort="quick")
+    rng = np.random.default_rng(1)
+    orders = [assemble(draft, rng.choice([-1.0, 1.0], size=24), seed=3, effort="quick", allowed=None) for _ in range(3)]
+    assert not np.array_equal(orders[0].shot, orders[1].shot)
+    for other in orders[1:]:
+        assert np.array_equal(other.start_s, orders[0].start_s)
+        assert np.array_equal(other.settle_s, orders[0].settle_s)
+    first = np.flatnonzero(np.diff(orders[0].packet, prepend=-1))
+    assert (orders[0].settle_s[first] == 0.5).all()
 
 
 def test_holds_follow_each_other_evenly() -> None:
