@@ -64,16 +64,17 @@ def maximin(oracle: Oracle, n: int, *, gap: float = 1e-4, rounds: int = 400) -> 
         proposed /= proposed.sum()
         # a step part of the way from the best share known: plain cutting planes swing between far corners
         weights = 0.7 * proposed + 0.3 * best
-    return _tidy(oracle, best, reached), reached, bound
+    return *_tidy(oracle, best, reached), bound
 
 
-def _tidy(oracle: Oracle, weights: FloatArray, reached: float) -> FloatArray:
-    """Leave out shares too small to matter, as long as that costs nothing worth telling."""
+def _tidy(oracle: Oracle, weights: FloatArray, reached: float) -> tuple[FloatArray, float]:
+    """Leave out shares too small to matter, as long as that costs nothing worth telling; shares and their T."""
     for smallest in (3e-3, 1e-3, 1e-4, 1e-6):
         trimmed = np.where(weights < smallest, 0.0, weights)
         if trimmed.sum() <= 0.0:
             continue
         trimmed /= trimmed.sum()
-        if float((np.atleast_2d(oracle(trimmed)) @ trimmed).min()) >= reached * (1.0 - 1e-4):
-            return trimmed
-    return weights
+        value = float((np.atleast_2d(oracle(trimmed)) @ trimmed).min())
+        if value >= reached * (1.0 - 1e-4):
+            return trimmed, value
+    return weights, reached

@@ -50,15 +50,14 @@ class Design:
 
 
 def information(factors: FloatArray, weights: FloatArray) -> FloatArray:
-    """M(w) for factors (n_candidate, n_row, n_parameter) and weights (n_candidate,)."""
-    n_parameter = factors.shape[2]
-    rows = (factors * np.sqrt(weights)[:, None, None]).reshape(-1, n_parameter)
-    return np.asarray(rows.T @ rows)
+    """M(w) (..., n_parameter, n_parameter): factors (..., n_candidate, n_row, n_parameter), weights (n_candidate,)."""
+    *rigs, _, _, n_parameter = factors.shape
+    rows = (factors * np.sqrt(weights)[:, None, None]).reshape(*rigs, -1, n_parameter)
+    return np.asarray(np.swapaxes(rows, -1, -2) @ rows)
 
 
-def _solve(factors: FloatArray, step: Callable[[FloatArray], FloatArray], power: float) -> tuple[FloatArray, int]:
+def _solve(n: int, step: Callable[[FloatArray], FloatArray], power: float) -> tuple[FloatArray, int]:
     """Multiplicative steps w <- w s^power / sum, s the sensitivity with mean 1 under w, until max s <= 1 + GOOD."""
-    n = len(factors)
     weights = np.full(n, 1.0 / n)
     best, least = weights, np.inf
     for rounds in range(1, ROUNDS + 1):
@@ -82,10 +81,11 @@ def _drop(weights: FloatArray, sensitivity: FloatArray) -> FloatArray:
 
 
 def _inverse(matrix: FloatArray) -> FloatArray:
-    n = len(matrix)
-    scale = np.sqrt(np.maximum(np.diag(matrix), np.finfo(float).tiny))
-    scaled = matrix / np.outer(scale, scale) + RIDGE * n * np.eye(n)
-    return np.asarray(np.linalg.inv(scaled) / np.outer(scale, scale))
+    """Inverses of (..., n, n), scaled to unit diagonals and held off singularity by RIDGE."""
+    n = matrix.shape[-1]
+    scale = np.sqrt(np.maximum(np.diagonal(matrix, axis1=-2, axis2=-1), np.finfo(float).tiny))
+    outer = scale[..., :, None] * scale[..., None, :]
+    return np.asarray(np.linalg.inv(matrix / outer + RIDGE * n * np.eye(n)) / outer)
 
 
 def d_optimal(factors: FloatArray) -> Design:
@@ -98,9 +98,9 @@ def d_optimal(factors: FloatArray) -> Design:
 
     def step(weights: FloatArray) -> FloatArray:
         inverse = _inverse(information(factors, weights))
-        return np.asarray(np.einsum("irp,pq,irq->i", factors, inverse, factors) / p)
+        return np.asarray(((factors @ inverse) * factors).sum(axis=(1, 2)) / p)
 
-    weights, rounds = _solve(factors, step, 1.0)
+    weights, rounds = _solve(len(factors), step, 1.0)
     sensitivity = step(weights)
     sign, value = np.linalg.slogdet(information(factors, weights))
     worst = float(sensitivity.max())
@@ -122,44 +122,31 @@ def l_optimal(factors: FloatArray, wanted: FloatArray) -> Design:
     Bound: for any H, tr(A'H) = tr(A'M^-1/2 M^1/2 H) <= sqrt(tr(A'M^-1A) tr(H'MH)) by Cauchy and Schwarz, and
     tr(H'MH) <= max_i |F_i H|^2, so that tr(A'M^-1A) >= tr(A'H)^2 / max_i |F_i H|^2 for every share w. With H = M^-1 A
     it is tight at the optimum (Elfving 1952 for one column). It holds also where M is singular.
+
+    Several rigs at once, for a design that is good on average: factors (n_rig, n_candidate, n_row, n_parameter). The
+    value is then the sum over the rigs, and the bound holds for the sum: it is the problem above with the rigs'
+    parameters beside each other, each rig's M a block of its own.
     """
+    each = factors if factors.ndim == 4 else factors[None]
+
+    def gains(weights: FloatArray) -> tuple[FloatArray, float]:
+        h = _inverse(information(each, weights)) @ wanted
+        gain = ((each @ h[:, None]) ** 2).sum(axis=(0, 2, 3))
+        return gain, float((wanted * h).sum())
 
     def step(weights: FloatArray) -> FloatArray:
-        h = _inverse(information(factors, weights)) @ wanted
-        reached = np.einsum("irp,pc->irc", factors, h)
-        gain = np.einsum("irc,irc->i", reached, reached)
+        gain, _ = gains(weights)
         return np.asarray(gain / max(float(weights @ gain), np.finfo(float).tiny))
 
-    weights, rounds = _solve(factors, step, 0.5)
-    h = _inverse(information(factors, weights)) @ wanted
-    gain = np.einsum("irp,pc->irc", factors, h)
-    size = np.einsum("irc,irc->i", gain, gain)
-    bound = float(np.einsum("pc,pc->", wanted, h)) ** 2 / float(size.max())
-    value = float(np.einsum("pc,pq,qc->", wanted, _inverse(information(factors, weights)), wanted))
+    weights, rounds = _solve(each.shape[1], step, 0.5)
+    gain, value = gains(weights)
+    bound = value**2 / float(gain.max())
     return Design(
-        criterion="c" if wanted.shape[1] == 1 else "L",
+        criterion="c" if wanted.shape[1] == 1 and len(each) == 1 else "L",
         weights=weights,
         value=value,
         bound=bound,
         efficiency=bound / value,
-        sensitivity=size / value,
+        sensitivity=gain / value,
         rounds=rounds,
     )
-
-
-def stacked(factors: list[FloatArray], wanted: FloatArray) -> tuple[FloatArray, FloatArray]:
-    """Several rigs at once, for a design that is good on average: their factors as blocks of one larger problem.
-
-    factors: K arrays (n_candidate, n_row, n_parameter); wanted (n_parameter, n_combination). Returns factors
-    (n_candidate, K n_row, K n_parameter) and wanted (K n_parameter, K n_combination): the criterion of `l_optimal` on
-    them is the sum over the rigs, and its proved bound holds for the sum.
-    """
-    count = len(factors)
-    n, row, parameter = factors[0].shape
-    big = np.zeros((n, count * row, count * parameter))
-    target = np.zeros((count * parameter, count * wanted.shape[1]))
-    for k, one in enumerate(factors):
-        big[:, k * row : (k + 1) * row, k * parameter : (k + 1) * parameter] = one
-        columns = slice(k * wanted.shape[1], (k + 1) * wanted.shape[1])
-        target[k * parameter : (k + 1) * parameter, columns] = wanted
-    return big, target

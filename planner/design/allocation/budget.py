@@ -14,8 +14,12 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from planner.arrays import FloatArray
 from planner.design.allocation.result import Allocation, Certificate, Share
 from planner.design.rounding import counts_in_budget
+
+TOTAL = "signal, all told (m/s^2)"  # names of the errors
+FIXED = "signal, the part that no rig time mends (m/s^2)"
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -45,8 +49,13 @@ def allocate_budget(
     hold_s: float,
     checks: Sequence[Check],
     hours: float,
+    scale_error: float = 0.0,
+    stated_share: float | None = None,
 ) -> Allocation:
     """Split the hours between the signal (variance after one second of rig time) and the checks.
+
+    scale_error: what the error of the scale factor makes of the signal, m/s^2; no rig time mends it. stated_share: a
+    share of the signal, 0 to 1, that somebody had in mind: what it would cost is said.
 
     Raises:
         PlanImpossible: the hours are too few for a packet of each.
@@ -60,7 +69,7 @@ def allocate_budget(
     with np.errstate(divide="ignore", invalid="ignore"):
         reached = float(np.where(used, roots**2 / (counts * cost), 0.0).sum())
     bound = float(roots.sum()) ** 2
-    fixed = sum((check.slope * check.offset_error) ** 2 for check in checks)
+    fixed = sum((check.slope * check.offset_error) ** 2 for check in checks) + scale_error**2
     names = ["signal", *(check.name for check in checks)]
     shots = [signal_shots, *(check.shots for check in checks)]
     holds = [hold_s, *(check.hold_s for check in checks)]
@@ -79,11 +88,19 @@ def allocate_budget(
             for i in range(len(names))
             if used[i]
         ),
-        errors={
-            "signal, all told (m/s^2)": float(np.sqrt(reached + fixed)),
-            "signal, the part that no rig time mends (m/s^2)": float(np.sqrt(fixed)),
-        },
+        errors={TOTAL: float(np.sqrt(reached + fixed)), FIXED: float(np.sqrt(fixed))},
         certificate=Certificate(criterion="closed form", value=bound, bound=bound, efficiency=1.0),
         rounded=bound / (hours * 3600) / reached,
-        lines=(f"{100 * weights[0]:.0f} % of the rig time for the signal, the rest for checks",),
+        lines=(
+            f"{100 * weights[0]:.0f} % of the rig time for the signal, the rest for checks",
+            *_other_share(roots, weights, stated_share),
+        ),
     )
+
+
+def _other_share(roots: FloatArray, weights: FloatArray, share: float | None) -> list[str]:
+    """What a share of the signal other than the best one costs, the checks' rest split as well as can be."""
+    if share is None or not 0.0 < share < 1.0 or weights[0] >= 1.0:
+        return []
+    more = (roots[0] ** 2 / share + roots[1:].sum() ** 2 / (1 - share)) / roots.sum() ** 2 - 1
+    return [f"{100 * share:.0f} % for the signal, as the sequence has it, would need {100 * more:.2g} % more hours"]

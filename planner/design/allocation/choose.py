@@ -1,22 +1,38 @@
 """From a sequence and its rig to the allocation for its goal."""
 
+from dataclasses import replace
 from math import cos, radians
 
 import numpy as np
 
-from planner.design.allocation.budget import Check, allocate_budget
-from planner.design.allocation.decay import allocate_coherence, allocate_curve, allocate_plateau, allocate_revival
+from planner.design.allocation.budget import FIXED, TOTAL, Check, allocate_budget
+from planner.design.allocation.decay import (
+    COHERENCE,
+    allocate_coherence,
+    allocate_curve,
+    allocate_plateau,
+    allocate_revival,
+)
 from planner.design.allocation.knowledge import Knowledge, knowledge_of
-from planner.design.allocation.result import Allocation, Certificate, Share
-from planner.design.allocation.signal import Scale, allocate_signal, signal_variance_rate
-from planner.design.ladder import ladder
+from planner.design.allocation.ladder import allocate_ladder
+from planner.design.allocation.result import Allocation
+from planner.design.allocation.signal import (
+    SIGNAL,
+    Scale,
+    Wander,
+    allocate_signal,
+    best_hold,
+    signal_variance_rate,
+)
+from planner.design.allocation.target import with_target
 from planner.errors import PlanImpossible
 from planner.physics.atoms import atom
 from planner.physics.constants import HBAR
-from planner.sequence.model import Rig, Sequence
+from planner.sequence.model import Rig, Sequence, Sinusoid
 
-GOALS = ("signal", "coherence", "curve", "plateau", "revival", "ladder", "budget")
-PRIOR_RAD = 0.3  # how well the phase at the shortest hold is known before a ladder; common practice, no source
+DECAY_GOALS = ("coherence", "curve", "plateau", "revival")
+SIGNAL_GOALS = ("signal", "ladder", "budget")
+GOALS = (*SIGNAL_GOALS, *DECAY_GOALS)
 RISK = 1e-3  # of a ladder whose sequence states none
 
 
@@ -28,10 +44,33 @@ def allocate(
     dead_s: all of a cycle that is not hold, s.
 
     Raises:
-        PlanImpossible: something that the goal needs is not said, or the hours are too few; the message says what.
+        PlanImpossible: something that the goal needs is not said, the hours are too few, or no night reaches the
+            target; the message says what would do.
     """
     known = knowledge_of(sequence, rig, dead_s)
     kind = goal or sequence.goal.kind
+    if kind in DECAY_GOALS:
+        found = _about_decay(sequence, known, kind, hours, robust=robust)
+    elif kind in SIGNAL_GOALS:
+        found = _about_signal(sequence, rig, known, kind, hours, robust=robust)
+    else:
+        raise PlanImpossible(
+            f'the goal "{kind}" has no allocation of rig time; choose one with --goal: {", ".join(GOALS)}'
+        )
+    target = sequence.goal.target
+    if target is None or kind != sequence.goal.kind:
+        return found
+    if kind == "coherence":
+        absolute = target * known.coherence_s if sequence.goal.target_unit in ("", "%") else target
+        return with_target(found, name=COHERENCE, unit="s", target=absolute)
+    if kind == "signal":
+        return with_target(found, name=SIGNAL, unit="m/s^2", target=target)
+    if kind == "budget":
+        return with_target(found, name=TOTAL, unit="m/s^2", target=target, fixed=found.errors[FIXED])
+    return found
+
+
+def _about_decay(sequence: Sequence, known: Knowledge, kind: str, hours: float, *, robust: bool) -> Allocation:
     details = sequence.goal.details
     if kind == "coherence":
         return allocate_coherence(known, hours, robust=robust)
@@ -40,15 +79,34 @@ def allocate(
     if kind == "plateau":
         level = _needed(details.get("plateau"), "plateau", "the contrast at which the decay may level off")
         return allocate_plateau(known, hours, plateau=level, significance=details.get("significance", 0.05))
-    if kind == "revival":
-        period = _needed(details.get("period"), "period", "the period of the modulation")
-        depth = _needed(details.get("depth"), "depth", "its relative depth")
-        return allocate_revival(
-            known, hours, period_s=period, depth=depth, significance=details.get("significance", 0.01)
-        )
+    period = _needed(details.get("period_s"), "period", "the period of the modulation")
+    depth = _needed(details.get("depth"), "depth", "its relative depth")
+    name = sequence.roles["hold"]
+    swept = next((sweep.values[name] for sweep in sequence.sweeps if name in sweep.values), ())
+    window = (min(swept), max(swept)) if swept and max(swept) - min(swept) >= period else None
+    return allocate_revival(
+        known,
+        hours,
+        period_s=period,
+        depth=depth,
+        significance=details.get("significance", 0.01),
+        window_s=window,
+    )
+
+
+def _about_signal(
+    sequence: Sequence, rig: Rig, known: Knowledge, kind: str, hours: float, *, robust: bool
+) -> Allocation:
+    details = sequence.goal.details
     scale = scale_of(sequence, rig)
     if kind == "ladder":
-        return _ladder(known, scale, hours, details.get("risk", RISK))
+        return allocate_ladder(
+            known.draws() if robust and known.spread else [known],
+            scale,
+            hours,
+            longest_s=_longest_swept(sequence),
+            risk=details.get("risk", RISK),
+        )
     if not sequence.goal.wanted:
         raise PlanImpossible(
             f'the goal "{kind}" needs the parity that carries the signal, such as '
@@ -56,14 +114,38 @@ def allocate(
         )
     if kind == "budget":
         return _budget(known, scale, sequence, hours, robust=robust)
-    return allocate_signal(
-        known,
-        scale,
-        hours,
-        largest=details.get("signal", 0.0),
-        wander_rad_per_root_s=_walk(sequence, known, scale),
-        robust=robust,
+    hold = best_hold(known, scale, robust=robust)
+    found = allocate_signal(
+        known, scale, hours, largest=details.get("signal", 0.0), wander=wander_of(sequence, known, hold), hold_s=hold
     )
+    return replace(found, lines=(*found.lines, *_shallower(sequence, rig, known, scale, found.errors[SIGNAL])))
+
+
+def _shallower(sequence: Sequence, rig: Rig, known: Knowledge, scale: Scale, error: float) -> list[str]:
+    """What another lattice depth would bring, if coherence time x depth x separation is as constant as is said.
+
+    Under that scaling the shallowest lattice is always the best, so the answer is a limit, not an optimum: atoms that a
+    shallow lattice loses are not in it.
+    """
+    name = sequence.roles.get("depth")
+    if name is None or sequence.expected.coherence_constant is None or sequence.expected.coherence_s is not None:
+        return []
+    setting = sequence.settings[name]
+    low, _ = rig.setting_limits.get(name, (setting.low, setting.high))
+    depth = max(setting.low, low)
+    if not 0.0 < depth < setting.rest:
+        return []
+    other = replace(known, coherence_s=known.coherence_s * setting.rest / depth)
+    hold = best_hold(other, scale, robust=False)
+    now = best_hold(known, scale, robust=False)
+    ratio = float(
+        signal_variance_rate(other, scale, np.array([hold]))[0] / signal_variance_rate(known, scale, np.array([now]))[0]
+    )
+    return [
+        f"{name} at its lowest, {depth:.3g} instead of {setting.rest:.3g} Er, with a hold of {hold:.3g} s: the signal "
+        f"to {error * ratio**0.5:.2g} m/s^2, or {100 * (1 - ratio):.0f} % fewer hours, if the coherence constant holds "
+        "there and no more atoms are lost; measure both before believing it"
+    ]
 
 
 def _needed(value: float | None, name: str, what: str) -> float:
@@ -78,6 +160,14 @@ def _swept_holds(sequence: Sequence) -> tuple[float, ...]:
         if name in sweep.values:
             return sweep.values[name]
     raise PlanImpossible(f'the goal "curve" needs the holds to be measured: a sweep of {name}')
+
+
+def _longest_swept(sequence: Sequence) -> float:
+    name = sequence.roles["hold"]
+    return max(
+        (max(sweep.values[name]) for sweep in sequence.sweeps if name in sweep.values),
+        default=sequence.settings[name].rest,
+    )
 
 
 def scale_of(sequence: Sequence, rig: Rig) -> Scale:
@@ -98,65 +188,22 @@ def scale_of(sequence: Sequence, rig: Rig) -> Scale:
     )
 
 
-def _walk(sequence: Sequence, known: Knowledge, scale: Scale) -> float:
-    """How fast the common phase walks at the best hold, rad per root second, by the declared drift."""
-    from planner.design.allocation.signal import best_hold
-
-    hold = np.array([best_hold(known, scale, robust=False)])
-    noise = float(np.sqrt(known.variance_at(hold)[0]) / (known.contrast_at(hold)[0] / 2))
-    rate = 0.0
+def wander_of(sequence: Sequence, known: Knowledge, hold_s: float) -> Wander:
+    """The declared drift of the common phase at a hold: phase drift there is given in single-shot noise of y."""
+    hold = np.array([hold_s])
+    noise = float(np.sqrt(known.variance_at(hold)[0]) / (known.contrast_at(hold)[0] / 2))  # rad, per unit of that
+    rate = {"phase": 0.0, "acceleration": 0.0}
+    rhythms: dict[str, list[Sinusoid]] = {"phase": [], "acceleration": []}
     for drift in sequence.drift:
-        per_s = drift.wander**2 / drift.wander_over_s
-        if drift.kind == "phase":
-            rate += per_s * noise**2
-        elif drift.kind == "acceleration":
-            rate += per_s * float(scale.at(hold)[0]) ** 2
-    return float(np.sqrt(rate))
-
-
-def _ladder(known: Knowledge, scale: Scale, hours: float, risk: float) -> Allocation:
-    def sigma(hold: float) -> float:
-        one = np.array([hold])
-        variance = 8 * known.variance_at(one) / (known.packet_shots * known.contrast_at(one) ** 2)
-        return float(np.sqrt(variance[0]))
-
-    found = ladder(
-        shortest_s=known.shortest_s,
-        longest_s=known.longest_s,
-        prior_rad=PRIOR_RAD,
-        sigma_of=sigma,
-        scale_of=lambda hold: float(scale.at(np.array([hold]))[0]),
-        cost_of=lambda hold: float(known.packet_s(np.array([hold]))[0]),
-        risk=risk,
-    )
-    if found.rig_s > hours * 3600:
-        raise PlanImpossible(
-            f"the ladder takes {found.rig_s / 3600:.2f} h, the night has {hours:g} h: allow more risk or more hours"
-        )
-    shares = tuple(
-        Share(
-            hold_s=hold,
-            packets=count,
-            shots=count * known.packet_shots,
-            kind="fringe",
-            rig_s=count * float(known.packet_s(np.array([hold]))[0]),
-            wanted_share=count * float(known.packet_s(np.array([hold]))[0]) / found.rig_s,
-        )
-        for hold, count in zip(found.holds_s, found.packets, strict=True)
-    )
-    finest = found.sigma_rad[-1] / float(scale.at(np.array([found.holds_s[-1]]))[0])
-    return Allocation(
-        goal="ladder",
-        hours=hours,
-        shares=shares,
-        errors={"acceleration (m/s^2)": finest},
-        certificate=Certificate(criterion="risk", value=found.risk, bound=risk, efficiency=1.0),
-        rounded=1.0,
-        lines=(
-            f"{len(shares)} rungs in {found.rig_s / 60:.0f} min; wrong fringe with chance {found.risk:.2g} at most, "
-            f"the phase at the shortest hold known to {PRIOR_RAD:g} rad beforehand",
-        ),
-        details={"risk": found.risk},
+        if drift.kind in rate:
+            unit = noise if drift.kind == "phase" else 1.0
+            rate[drift.kind] += (unit * drift.wander) ** 2 / drift.wander_over_s
+            rhythms[drift.kind] += [replace(one, amplitude=unit * one.amplitude) for one in drift.sinusoids]
+    return Wander(
+        phase_rate=rate["phase"],
+        phase_rhythms=tuple(rhythms["phase"]),
+        acceleration_rate=rate["acceleration"],
+        acceleration_rhythms=tuple(rhythms["acceleration"]),
     )
 
 
@@ -166,8 +213,6 @@ def _budget(known: Knowledge, scale: Scale, sequence: Sequence, hours: float, *,
     The offset that the slope is to bridge is taken as the largest distance of the swept values from rest: a sweep says
     how far the setting may stand from where its effect vanishes. The slope is measured between the sweep's ends.
     """
-    from planner.design.allocation.signal import best_hold
-
     hold = best_hold(known, scale, robust=robust)
     rate = float(signal_variance_rate(known, scale, np.array([hold]))[0])
     skip = {sequence.roles["hold"], sequence.roles["readout"]}
@@ -200,4 +245,6 @@ def _budget(known: Knowledge, scale: Scale, sequence: Sequence, hours: float, *,
         hold_s=hold,
         checks=checks,
         hours=hours,
+        scale_error=sequence.goal.details.get("scale_factor_error", 0.0) * sequence.goal.details.get("signal", 0.0),
+        stated_share=sequence.goal.details.get("share"),
     )

@@ -9,13 +9,14 @@ from planner.arrays import FloatArray, IntArray
 from planner.design.allocation.knowledge import Knowledge
 from planner.design.allocation.result import Allocation, Certificate, Share
 from planner.design.maximin import maximin
-from planner.design.optimal import information, l_optimal, stacked
+from planner.design.optimal import information, l_optimal
 from planner.design.rounding import counts_for_worst, counts_in_budget
 from planner.errors import PlanImpossible
 
 GRID = 120  # candidate holds, log-spaced
 REVIVAL_PER_PERIOD = 12  # candidate holds in a period of the modulation
 MOST_CANDIDATES = 600
+COHERENCE, LIFETIME = "coherence time (s)", "population lifetime (s)"  # names of the errors
 SMALL = 0.004  # shares of rig time below this are merged into their neighbours
 
 
@@ -48,22 +49,21 @@ def allocate_coherence(
     """
     hold = candidates(rig)
     rigs = rig.draws() if robust and rig.spread else [rig]
-    factors = [_both(one, hold, lifetime_weight) for one in rigs]
     wanted = np.array([[0.0, 0.0], [1.0, 0.0], [0.0, 0.0], [0.0, np.sqrt(lifetime_weight)]])
     if lifetime_weight == 0.0:
-        factors, wanted = [one[:, :1, :2] for one in factors], wanted[:2, :1]
-    big, target = stacked(factors, wanted)
-    design = l_optimal(big, target)
+        wanted = wanted[:, :1]
+
+    def factors(holds_s: FloatArray) -> FloatArray:
+        return np.stack([_both(one, holds_s) for one in rigs])
+
+    design = l_optimal(factors(hold), wanted)
     points, weights = _merge(hold, design.weights)
     counts = counts_in_budget(weights, rig.packet_s(points), hours * 3600)
-    at_points, _ = stacked(
-        [_both(one, points, lifetime_weight)[:, : big.shape[1] // len(rigs), : wanted.shape[0]] for one in rigs], wanted
-    )
-    reached = _variance(at_points, counts * rig.packet_s(points), target)
-    variances = _variances(_both(rig, points, 1.0), counts * rig.packet_s(points))
+    reached = _variance(factors(points), counts * rig.packet_s(points), wanted)
+    variances = _variances(_both(rig, points), counts * rig.packet_s(points))
     errors = {
-        "coherence time (s)": rig.coherence_s * float(np.sqrt(variances[1])),
-        "population lifetime (s)": rig.lifetime_s * float(np.sqrt(variances[3])),
+        COHERENCE: rig.coherence_s * float(np.sqrt(variances[1])),
+        LIFETIME: rig.lifetime_s * float(np.sqrt(variances[3])),
     }
     return _allocation(
         "coherence",
@@ -82,12 +82,14 @@ def allocate_coherence(
         rounded=design.bound / (hours * 3600) / reached,
         lines=[
             f"coherence time to {100 * np.sqrt(variances[1]):.2g} %, "
-            f"population lifetime to {100 * np.sqrt(variances[3]):.2g} %"
+            f"population lifetime to {100 * np.sqrt(variances[3]):.2g} %",
+            f"{len(points)} holds are best if the decay is exponential, and cannot show that it is: for that there is "
+            "the goal plateau",
         ],
     )
 
 
-def _both(rig: Knowledge, hold: FloatArray, lifetime_weight: float) -> FloatArray:
+def _both(rig: Knowledge, hold: FloatArray) -> FloatArray:
     """Factors (n, 2, 4): the first row about contrast, the second about atoms."""
     out = np.zeros((len(hold), 2, 4))
     out[:, 0, :2] = contrast_factors(rig, hold)[:, 0]
@@ -137,7 +139,7 @@ def allocate_plateau(rig: Knowledge, hours: float, *, plateau: float, significan
             f"a plateau at {plateau:g} is not between 0 and the contrast at short hold ({rig.contrast:g})"
         )
     curve = plateau + (rig.contrast - plateau) * np.exp(-hold / rig.coherence_s)
-    precision = rig.packet_shots / (8 * rig.variance_at(hold)) / rig.packet_s(hold)
+    precision = rig.contrast_information(hold, curve) / rig.packet_s(hold)
     taus = np.geomspace(rig.coherence_s / 5, rig.coherence_s * 60, 1500)
     shapes = np.exp(-hold[None] / taus[:, None])
 
@@ -174,13 +176,20 @@ def allocate_plateau(rig: Knowledge, hours: float, *, plateau: float, significan
 
 
 def allocate_revival(
-    rig: Knowledge, hours: float, *, period_s: float, depth: float, significance: float = 0.01
+    rig: Knowledge,
+    hours: float,
+    *,
+    period_s: float,
+    depth: float,
+    significance: float = 0.01,
+    window_s: tuple[float, float] | None = None,
 ) -> Allocation:
     """Most power to see a modulation of contrast of known period and unknown phase: L-optimal for its two quadratures,
-    with start and coherence time free."""
-    low = max(rig.shortest_s, period_s / 50)
-    count = int(min(MOST_CANDIDATES, max(48, REVIVAL_PER_PERIOD * (rig.longest_s - low) / period_s)))
-    stop = min(rig.longest_s, low + count * period_s / REVIVAL_PER_PERIOD)
+    with start and coherence time free. window_s: where to look; anywhere without it."""
+    first, last = window_s or (rig.shortest_s, rig.longest_s)
+    low = max(first, period_s / 50)
+    count = int(min(MOST_CANDIDATES, max(48, REVIVAL_PER_PERIOD * (last - low) / period_s)))
+    stop = min(last, low + count * period_s / REVIVAL_PER_PERIOD)
     hold = np.linspace(low, stop, count)
     contrast = rig.contrast_at(hold)
     turn = 2 * np.pi * hold / period_s
@@ -212,6 +221,9 @@ def allocate_revival(
         lines=[
             f"a modulation of depth {depth:g} and period {period_s:g} s is seen with chance {100 * power:.0f} % in one "
             f"such night; {nights:.2g} nights give 90 %"
+            if nights > 1.0
+            else f"a modulation of depth {depth:g} and period {period_s:g} s is seen with chance 90 % after "
+            f"{hours * nights:.2g} h of this plan"
         ],
         details={"power": power, "nights": nights},
     )
@@ -248,8 +260,9 @@ def _merge(hold: FloatArray, weights: FloatArray) -> tuple[FloatArray, FloatArra
 
 
 def _variance(factors: FloatArray, seconds: FloatArray, wanted: FloatArray) -> float:
-    inverse = np.linalg.pinv(information(factors, seconds))
-    return float(np.einsum("pc,pq,qc->", wanted, inverse, wanted))
+    """Sum of the variances of the wanted combinations, over all rigs where factors has several."""
+    inverse = np.linalg.pinv(information(factors, seconds), hermitian=True)
+    return float((wanted * (inverse @ wanted)).sum())
 
 
 def _variances(factors: FloatArray, seconds: FloatArray) -> FloatArray:

@@ -1,9 +1,14 @@
 """What is known of a rig before the night, and what one packet would tell, as functions of the hold.
 
-Models: contrast C(T) = C_0 exp(-T / tau_c), atoms N(T) = N_0 exp(-T / tau_n); variance of one shot's fraction, averaged
-over a fringe, excess (1 - C^2 / 2) / (4 N): projection noise y (1 - y) / N averaged over equally spaced phases, times
-the excess noise. n shots on equally spaced phases know the contrast with variance 8 sigma_y^2 / n and the phase with
-8 sigma_y^2 / (n C^2) (Cramer-Rao, see physics/noise.py).
+Models: contrast C(T) = C_0 exp(-T / tau_c), atoms N(T) = N_0 exp(-T / tau_n); variance of one shot's fraction
+excess y (1 - y) / N, projection noise times the excess noise. n shots on equally spaced phases know the contrast with
+variance 8 sigma^2 / n and the phase with 8 sigma^2 / (n C^2) (Cramer-Rao, see physics/noise.py), where sigma^2 averages
+the shots' variance as the estimate weighs them: by cos^2 of the fringe phase for the contrast, sin^2 for the phase.
+With y (1 - y) = (1 - C^2 cos^2) / 4 and mean cos^4 = 3/8, mean cos^2 sin^2 = 1/8, that is
+
+    contrast    excess (1 - 3 C^2 / 4) / (4 N)
+    phase       excess (1 - C^2 / 4) / (4 N), and at most excess / (4 N) at any one phase of the fringe
+    unweighted  excess (1 - C^2 / 2) / (4 N)
 """
 
 from dataclasses import dataclass, replace
@@ -46,7 +51,20 @@ class Knowledge:
 
     def variance_at(self, hold_s: FloatArray) -> FloatArray:
         """Variance of one shot's fraction, averaged over the fringe."""
-        return np.asarray(self.excess * (1 - self.contrast_at(hold_s) ** 2 / 2) / (4 * self.atoms_at(hold_s)))
+        return self._variance(hold_s, self.contrast_at(hold_s), 1 / 2)
+
+    def _variance(self, hold_s: FloatArray, contrast: FloatArray, less: float) -> FloatArray:
+        return np.asarray(self.excess * (1 - less * contrast**2) / (4 * self.atoms_at(hold_s)))
+
+    def phase_error(self, hold_s: FloatArray) -> FloatArray:
+        """Standard error of the phase from one full packet, rad, while small; at most, whatever the fringe's phase.
+
+        A shot's noise is at most that at mid-fringe, y = 1/2: for four phases that bound is met at phases 0, 90, ...
+        """
+        return np.asarray(
+            np.sqrt(8 * self._variance(hold_s, self.contrast_at(hold_s), 0.0) / self.packet_shots)
+            / self.contrast_at(hold_s)
+        )
 
     @property
     def packet_shots(self) -> int:
@@ -57,15 +75,17 @@ class Knowledge:
         """Rig time of one full fringe packet."""
         return np.asarray(self.packet_shots * (hold_s + self.dead_s))
 
-    def contrast_information(self, hold_s: FloatArray) -> FloatArray:
-        """Fisher information of one packet about the contrast at a hold.
+    def contrast_information(self, hold_s: FloatArray, contrast: FloatArray | None = None) -> FloatArray:
+        """Fisher information of one packet about the contrast at a hold, where it is the expected one or `contrast`.
 
-        n / (8 sigma_y^2), times nu^2 / (1 + nu^2), nu the contrast over its own error in one packet: a packet without
+        n / (8 sigma^2), times nu^2 / (1 + nu^2), nu the contrast over its own error in one packet: a packet without
         a visible fringe, its phase unknown, tells little, and less the weaker the fringe (the information of a Rice
-        distribution about its distance goes as nu^2 for small nu and 1 for large).
+        distribution about its distance goes as nu^2 for small nu and 1 for large). It is what the unbiased squared
+        contrast of a packet, averaged over packets, tells: variance 4 C^2 s^2 + 4 s^4 for a contrast error s.
         """
-        full = self.packet_shots / (8 * self.variance_at(hold_s))
-        seen = self.contrast_at(hold_s) ** 2 * full
+        true = self.contrast_at(hold_s) if contrast is None else contrast
+        full = self.packet_shots / (8 * self._variance(hold_s, true, 3 / 4))
+        seen = true**2 * full
         return np.asarray(full * seen / (1 + seen))
 
     def atom_information(self, hold_s: FloatArray) -> FloatArray:

@@ -9,8 +9,8 @@ T^2 exp(-2 T / tau_c)).
 Mid-fringe packets (two phases, a quarter turn either side of the fringe) tell phase best and know nothing of contrast;
 full fringes tell contrast and find the fringe. How many of which is a c-optimal design for the signal s in
 y = B + (C/2) cos(phi + p kappa s + theta), with phi, B and log C free, at the largest signal thought possible: the
-larger the signal, the more its scale, the contrast, matters. Packets in which the fringe has moved away by delta tell
-cos(delta)^2 as much, so the fringe has to be followed.
+larger the signal, the more its scale, the contrast, matters. Between packets the fringe walks and the tide moves it;
+mid-fringe packets follow it as well as they measure it, and tell less where they miss the slopes (tracking.py).
 """
 
 from dataclasses import dataclass
@@ -22,9 +22,13 @@ from planner.design.allocation.knowledge import Knowledge
 from planner.design.allocation.result import Allocation, Certificate, Share
 from planner.design.optimal import information, l_optimal
 from planner.design.rounding import counts_in_budget
+from planner.design.tracking import Motion, kept_information, motion, variance_before
 from planner.errors import PlanImpossible
+from planner.sequence.model import Sinusoid
 
 GRID = 400
+SIGNAL = "signal (m/s^2)"  # the name of its error
+MID_SHOTS = 4  # of a packet at mid-fringe: two phases, both signs of the parity
 LEAST_FULL = 2  # full fringes that find the fringe at the start of a night, whatever the design says
 
 
@@ -80,20 +84,40 @@ def packet_factors(rig: Knowledge, scale: Scale, hold_s: float, signal: float) -
     return out
 
 
+@dataclass(frozen=True, kw_only=True)
+class Wander:
+    """Declared drift of the phase common to both signs of the parity.
+
+    `phase_rate` in rad^2/s and `acceleration_rate` in (m/s^2)^2/s are those of random walks; the rhythms' amplitudes
+    (RMS) are in rad and m/s^2.
+    """
+
+    phase_rate: float = 0.0
+    phase_rhythms: tuple[Sinusoid, ...] = ()
+    acceleration_rate: float = 0.0
+    acceleration_rhythms: tuple[Sinusoid, ...] = ()
+
+    def between(self, kappa: float, spacing_s: float) -> Motion:
+        """How the phase moves in spacing_s at a scale factor kappa, rad per m/s^2."""
+        return motion(self.phase_rate, self.phase_rhythms, spacing_s) + motion(
+            self.acceleration_rate, self.acceleration_rhythms, spacing_s, kappa
+        )
+
+
 def allocate_signal(
     rig: Knowledge,
     scale: Scale,
     hours: float,
     *,
     largest: float = 0.0,
-    wander_rad_per_root_s: float = 0.0,
+    wander: Wander | None = None,
     hold_s: float | None = None,
     robust: bool = True,
 ) -> Allocation:
     """Hold, and full and mid-fringe packets, for the smallest error of the signal.
 
-    largest: largest signal thought possible, m/s^2. wander_rad_per_root_s: how fast the common phase walks at the
-    chosen hold; between packets it makes the mid-fringe phases miss the slopes.
+    largest: largest signal thought possible, m/s^2. wander: how the common phase drifts; it makes the mid-fringe
+    phases miss the slopes, and the error larger.
 
     Raises:
         PlanImpossible: the hours are too few for the packets that find the fringe and one at mid-fringe.
@@ -102,12 +126,12 @@ def allocate_signal(
     factors = packet_factors(rig, scale, hold, largest)
     wanted = np.array([[1.0], [0.0], [0.0], [0.0]])
     design = l_optimal(factors, wanted)
-    cost = np.array([4.0, 2.0 * rig.phases]) * (hold + rig.dead_s)
+    cost = np.array([MID_SHOTS, 2.0 * rig.phases]) * (hold + rig.dead_s)
     budget = hours * 3600
     if budget < LEAST_FULL * cost[1] + cost[0]:
         raise PlanImpossible(
             f"{hours:g} h are too few at a hold of {hold:.3g} s: {LEAST_FULL} fringes to find it and one packet at its "
-            f"slopes take {(LEAST_FULL * cost[1] + cost[0]) / 3600:.2f} h"
+            f"slopes take {(LEAST_FULL * cost[1] + cost[0]) / 3600:.2f} h; give that or more"
         )
     weights = np.maximum(design.weights, [0.0, LEAST_FULL * cost[1] / budget])
     counts = counts_in_budget(np.maximum(weights, 1e-9) / weights.sum(), cost, budget)
@@ -116,10 +140,12 @@ def allocate_signal(
         counts[0] = max(1, int((budget - counts[1] * cost[1]) / cost[0]))
     spent = counts * cost
     ideal = float(np.linalg.pinv(information(factors, spent))[0, 0])
-    missed = wander_rad_per_root_s**2 * float(spent.sum() / counts.sum())  # variance of the walk over one packet
-    kept = float(np.exp(-2 * missed) + 1) / 2  # mean of cos^2 of a normal angle
+    one = np.array([hold])
+    measured = float(rig.excess / (rig.contrast_at(one)[0] ** 2 * rig.atoms_at(one)[0])) / MID_SHOTS
+    moved = (wander or Wander()).between(float(scale.at(one)[0]), float(spent.sum() / counts.sum()))
+    missed = variance_before(moved, measured)
+    kept = kept_information(missed)
     error = float(np.sqrt(ideal / kept))
-    rate = signal_variance_rate(rig, scale, np.array([hold]))[0]
     shares = tuple(
         Share(
             hold_s=hold,
@@ -130,20 +156,27 @@ def allocate_signal(
             wanted_share=float(weight),
         )
         for count, per, kind, seconds, weight in zip(
-            counts, (4, 2 * rig.phases), ("mid", "fringe"), spent, design.weights, strict=True
+            counts, (MID_SHOTS, 2 * rig.phases), ("mid", "fringe"), spent, design.weights, strict=True
         )
     )
     return Allocation(
         goal="signal",
         hours=hours,
         shares=shares,
-        errors={"signal (m/s^2)": error},
+        errors={SIGNAL: error},
         certificate=Certificate(criterion="c", value=design.value, bound=design.bound, efficiency=design.efficiency),
         rounded=design.bound / budget / ideal,
         lines=(
             f"best hold {hold:.3g} s; the signal to {error:.2g} m/s^2 in {hours:g} h, "
             f"{error * np.sqrt(hours):.2g} m/s^2 in one hour",
-            f"the common phase walks {np.sqrt(missed):.2g} rad in a packet: {100 * (1 - kept):.2g} % is lost",
+            f"{counts[1]} full fringes find the fringe and know its contrast; packets at its slopes follow it: before "
+            f"each its phase is known to {np.sqrt(missed):.2g} rad, and {100 * (1 - kept):.2g} % of the time is lost "
+            "to missed slopes",
         ),
-        details={"hold_s": hold, "rate": float(rate), "missed_rad": float(np.sqrt(missed))},
+        details={
+            "hold_s": hold,
+            "rate": float(signal_variance_rate(rig, scale, one)[0]),
+            "missed_rad": float(np.sqrt(missed)),
+            "kept": kept,
+        },
     )
