@@ -8,7 +8,9 @@ from dataclasses import dataclass
 import numpy as np
 
 from planner.arrays import BoolArray, FloatArray, IntArray
-from planner.design.packets import Packets, balanced_order, dwell_order
+from planner.design.drift import Drifts
+from planner.design.dwells import dwell_order
+from planner.design.packets import Packets, balanced_order
 from planner.design.running_order import Kind
 from planner.errors import PlanImpossible
 from planner.quantities import format_quantity
@@ -46,8 +48,8 @@ class Layout:
     extra: Extra
 
 
-def lay_out(packets: Packets, table: ShotTable, sequence: Sequence, rng: np.random.Generator) -> Layout:
-    """A random layout.
+def lay_out(packets: Packets, table: ShotTable, sequence: Sequence, drifts: Drifts, rng: np.random.Generator) -> Layout:
+    """A random layout; drifts decide on the turns of slow switches.
 
     Raises:
         PlanImpossible: no packets, or a dwell that the whole measurement cannot fill.
@@ -66,8 +68,8 @@ def lay_out(packets: Packets, table: ShotTable, sequence: Sequence, rng: np.rand
                 f"a dwell of {need} in each of {states} states is longer than the whole measurement ({have}); "
                 f"set fringe.repeats to {repeats} or more, or shorten the dwell"
             )
-        order, dwell, dwell_set = dwell_order(packets, dwell_s, rng)
         settle = max(switch.settle_s for switch in slow)
+        order, dwell, dwell_set = dwell_order(packets, dwell_s, settle, drifts, rng)
     else:
         order = balanced_order(packets.point, rng)
         dwell = np.zeros(len(order), dtype=np.int64)

@@ -119,10 +119,10 @@ def draft_order(
     """Steps 1 to 3: everything but the flips of the wanted switch."""
     streams = [np.random.default_rng(np.random.SeedSequence(seed, spawn_key=(k,))) for k in range(4)]
     packets = find_packets(table, sequence)
-    layout = lay_out(packets, table, sequence, streams[0])
+    drifts = drifts_of(sequence, table)
+    layout = lay_out(packets, table, sequence, drifts, streams[0])
     wanted = flips.flipping_switch(sequence)
     total = float(table.duration_s.sum())
-    drifts = drifts_of(sequence, table)
     omega = drifts.omega
     shapes = {
         int(number): _shape(table, sequence, packets, int(number), wanted, drifts, omega, streams[1])

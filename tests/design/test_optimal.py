@@ -113,7 +113,7 @@ def test_no_random_share_beats_the_proved_bounds(parameters: int, seed: int) -> 
 
 
 def test_a_design_for_several_rigs_bounds_their_sum() -> None:
-    """The value is the sum over the rigs of each one's variance at a common share; random shares never beat the bound."""
+    """The value is the sum over rigs of each one's variance at a common share; random shares never beat the bound."""
     rigs = np.stack([exponential(GRID[::10], tau) for tau in (0.7, 1.0, 1.6)])
     found = l_optimal(rigs, WANTED)
 

@@ -3,6 +3,7 @@
 import numpy as np
 from scipy import stats
 
+from planner.design.drift import drifts_of
 from planner.design.layout import lay_out
 from planner.design.packets import find_packets
 from tests.design.nights import night_a, night_b
@@ -15,9 +16,10 @@ def places(table_and_sequence: tuple, draws: int) -> tuple[np.ndarray, np.ndarra
     """Place of each packet in each of many layouts, (draw, packet), and the packets' points."""
     table, sequence = table_and_sequence
     packets = find_packets(table, sequence)
+    drifts = drifts_of(sequence, table)
     found = np.empty((draws, len(packets)), dtype=np.int64)
     for draw in range(draws):
-        layout = lay_out(packets, table, sequence, np.random.default_rng((31, draw)))
+        layout = lay_out(packets, table, sequence, drifts, np.random.default_rng((31, draw)))
         found[draw, layout.packet] = np.arange(len(packets))
     return found, packets.point
 
