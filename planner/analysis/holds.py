@@ -13,11 +13,10 @@ from scipy import special
 
 from planner.analysis.amplitude import amplitude_interval, debiased, zero_test
 from planner.analysis.fringe import Fringes, group_sums
+from planner.analysis.hold_noise import steady_noise
 from planner.arrays import FloatArray, IntArray
 from planner.errors import NotEnoughData
 
-# Fewer residual degrees of freedom than this say too little about one hold's noise: the night's is taken instead.
-LEAST_NOISE_DOF = 3
 # White noise makes a residual this unlikely in one of a million packets.
 NEVER = 1e-6
 
@@ -83,13 +82,10 @@ def combine(fringes: Fringes, which: IntArray, hold_s: FloatArray, *, level: flo
     weight = group_sums(label, inverse, size)
     residual = group_sums(label, fringes.chi_squared[use], size)
     dof = group_sums(label, fringes.dof[use].astype(np.float64), size)
-    night = residual.sum() / dof.sum() if dof.sum() else 1.0
-    night_dof = dof.sum() if dof.sum() else np.inf
-    own = dof >= LEAST_NOISE_DOF
-    noise = np.where(own, residual / np.maximum(dof, 1), night)
-    # counts of atoms are whole numbers and never exactly noiseless; this keeps a made-up perfect fringe finite
-    noise = np.maximum(noise, 1e-12)
-    noise_dof = np.where(own, dof, night_dof)
+    if dof.any():
+        noise, noise_dof = steady_noise(residual, dof, hold_s)
+    else:
+        noise, noise_dof = np.ones(size), np.full(size, np.inf)
     there = count > 0
     kept = np.flatnonzero(there)
     power = raw[kept] / noise[kept]
@@ -102,7 +98,7 @@ def combine(fringes: Fringes, which: IntArray, hold_s: FloatArray, *, level: flo
         root[here], square[here] = debiased(power[here], freedom)
         p_zero[here] = zero_test(power[here], freedom, own_dof)
     unit = noise[kept] / weight[kept]
-    scatter = _scatter(fringes, label, noise, dof, raw, weight, count)
+    scatter = _scatter(fringes, label, noise, noise_dof, raw, weight, count)
     return HoldContrast(
         hold_s=hold_s[kept],
         fringes=count[kept],
@@ -155,23 +151,21 @@ def _scatter(
     fringes: Fringes,
     label: IntArray,
     noise: FloatArray,
-    dof: FloatArray,
+    noise_dof: FloatArray,
     raw: FloatArray,
     weight: FloatArray,
     count: IntArray,
 ) -> FloatArray:
-    """Variance of each hold's squared contrast from the scatter of its packets' own estimates, (n_hold,).
+    """Variance of each hold's squared contrast from the scatter of its packets' squared amplitudes, (n_hold,).
 
-    A packet contributes |q|^2 / w minus its share of the noise measured from its own residual; what is expected of it
-    at the hold's mean contrast is taken off before squaring, since packets of unequal weight contribute unequally.
+    What is expected of a packet at the hold's mean contrast is taken off before squaring, since packets of unequal
+    weight contribute unequally; what the noise's own error adds, in common to all packets, is added at the end.
     """
     use = fringes.solved
     inverse = 1 / fringes.quadrature_variance[use]
-    share = 2 * count / np.maximum(dof, 1)
-    given = fringes.amplitude_squared[use] * inverse - share[label] * fringes.chi_squared[use]
     mean_square = (raw - 2 * count * noise) / np.maximum(weight, 1e-300)
-    expected = mean_square[label] * inverse + noise[label] * (2 - share[label] * fringes.dof[use])
+    deviation = fringes.amplitude_squared[use] * inverse - mean_square[label] * inverse - 2 * noise[label]
     with np.errstate(divide="ignore", invalid="ignore"):
         correction = np.where(count > 1, count / (count - 1.0), np.nan)
-        total = group_sums(label, (given - expected) ** 2, len(count))
-        return np.asarray(16 * correction * total / weight**2)
+        total = correction * group_sums(label, deviation**2, len(count)) + 8 * (count * noise) ** 2 / noise_dof
+        return np.asarray(16 * total / weight**2)
