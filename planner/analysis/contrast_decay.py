@@ -1,7 +1,5 @@
 """Maximum likelihood of the fall of contrast with hold, on the exact distribution of squared amplitudes."""
 
-from dataclasses import dataclass, fields
-
 import numpy as np
 from scipy import special
 
@@ -9,7 +7,7 @@ from planner.analysis.amplitude import noise_nodes, power_cdf
 from planner.analysis.curve_fit import hessian, maximise, profile_interval
 from planner.analysis.decay import FASTEST, Decay, as_times, log_slopes, need_two_holds, search_limits
 from planner.analysis.holds import HoldContrast
-from planner.analysis.shapes import EXPONENTIAL, SHAPES, Shape, log_curve
+from planner.analysis.shapes import EXPONENTIAL, Shape, log_curve
 from planner.arrays import FloatArray
 from planner.errors import NotEnoughData
 
@@ -37,7 +35,7 @@ def expected_squared(holds: HoldContrast, shape: Shape, parameters: FloatArray) 
     return np.exp(np.clip(2 * log_curve(shape, parameters, holds.hold_s), -80, 20))
 
 
-class _ContrastLikelihood:
+class ContrastLikelihood:
     """Log likelihood of the holds' powers given the true contrast of each, the estimated noise averaged over."""
 
     def __init__(self, holds: HoldContrast, shape: Shape) -> None:
@@ -55,6 +53,7 @@ class _ContrastLikelihood:
         self.power: FloatArray = np.asarray(holds.power[:, None] * self.nodes)
 
     def per_hold(self, squared_contrast: FloatArray) -> FloatArray:
+        """Log likelihood of each hold if its squared contrast were this, (n_hold,)."""
         ncp = (squared_contrast / 4 * self.holds.weight / self.holds.noise)[:, None] * self.nodes
         each = self.log_weights + power_log_density(self.power, self.dof, ncp)
         largest = each.max(axis=1)
@@ -104,8 +103,8 @@ def fit_contrast_decay(holds: HoldContrast, *, shape: Shape = EXPONENTIAL, level
         )
     if len(holds) < 2 + len(shape.start):
         raise NotEnoughData(f"{len(holds)} holds cannot fix {shape.words}: it has {2 + len(shape.start)} parameters")
-    likelihood = _ContrastLikelihood(holds, shape)
-    best, scale = _top(likelihood)
+    likelihood = ContrastLikelihood(holds, shape)
+    best, scale = likeliest(likelihood)
     bread: FloatArray = np.asarray(np.linalg.inv(_positive(-hessian(likelihood, best, 0.3 * scale))))
     factor, freedom = _scatter_factor(likelihood, best, bread)
     covariance: FloatArray = bread * factor
@@ -158,7 +157,7 @@ def _positive(matrix: FloatArray) -> FloatArray:
     return np.asarray((vectors * np.maximum(values, 1e-9 * abs(values).max())) @ vectors.T)
 
 
-def _top(likelihood: _ContrastLikelihood) -> tuple[FloatArray, FloatArray]:
+def likeliest(likelihood: ContrastLikelihood) -> tuple[FloatArray, FloatArray]:
     """The likeliest parameters and about one standard error of each."""
     holds, shape = likelihood.holds, likelihood.shape
     guess = np.array(_first_guess(holds.hold_s, holds.squared, holds.expected_squared_variance(holds.squared)))
@@ -174,7 +173,7 @@ def _top(likelihood: _ContrastLikelihood) -> tuple[FloatArray, FloatArray]:
     return best, scale
 
 
-def _scatter_factor(likelihood: _ContrastLikelihood, best: FloatArray, bread: FloatArray) -> tuple[float, float]:
+def _scatter_factor(likelihood: ContrastLikelihood, best: FloatArray, bread: FloatArray) -> tuple[float, float]:
     """How many times the white-noise variance the rate's variance is, from packet scatter; and its freedom.
 
     1 with infinite freedom where too few packets repeat a hold to say.
@@ -194,50 +193,3 @@ def _scatter_factor(likelihood: _ContrastLikelihood, best: FloatArray, bread: Fl
     if freedom < 4:
         return 1.0, np.inf
     return float(measured.sum() / parts.sum()), freedom
-
-
-@dataclass(frozen=True, kw_only=True)
-class ShapeScore:
-    """How well one shape describes the holds; larger is better in each but `parameters`."""
-
-    shape: Shape
-    parameters: int
-    log_likelihood: float
-    score: float  # log likelihood less one for each parameter (Akaike's criterion over -2)
-    predictive: float  # sum of the log density of each hold, predicted from the others
-
-
-def compare_shapes(holds: HoldContrast) -> tuple[ShapeScore, ...]:
-    """All shapes that the number of holds can fix, the best score first.
-
-    Args:
-        holds: contrast per hold.
-
-    Returns:
-        A score for each shape; log likelihoods share one constant.
-
-    References:
-        Akaike, IEEE Trans. Autom. Control 19, 716 (1974) (from memory).
-    """
-    scores = []
-    for shape in SHAPES.values():
-        size = 2 + len(shape.start)
-        if len(holds) < size + 1:
-            continue
-        whole = _ContrastLikelihood(holds, shape)
-        best, _ = _top(whole)
-        predictive = 0.0
-        for out in range(len(holds)):
-            others = _without(holds, out)
-            fitted, _ = _top(_ContrastLikelihood(others, shape))
-            predictive += float(whole.per_hold(expected_squared(holds, shape, fitted))[out])
-        top = whole(best)
-        scores.append(
-            ShapeScore(shape=shape, parameters=size, log_likelihood=top, score=top - size, predictive=predictive)
-        )
-    return tuple(sorted(scores, key=lambda entry: -entry.score))
-
-
-def _without(holds: HoldContrast, out: int) -> HoldContrast:
-    keep = np.arange(len(holds)) != out
-    return HoldContrast(**{column.name: getattr(holds, column.name)[keep] for column in fields(holds)})

@@ -6,7 +6,7 @@ puts there, the noise taken from the same packets' residuals. That difference is
 unequally, because both parts see the same scatter.
 """
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, fields, replace
 
 import numpy as np
 from scipy import special
@@ -43,6 +43,11 @@ class HoldContrast:
 
     def __len__(self) -> int:
         return len(self.hold_s)
+
+    def without(self, hold: int) -> "HoldContrast":
+        """All holds but one."""
+        keep = np.arange(len(self)) != hold
+        return HoldContrast(**{column.name: getattr(self, column.name)[keep] for column in fields(self)})
 
     def expected_squared_variance(self, squared: FloatArray) -> FloatArray:
         """Variance of `squared` for white noise if the true squared contrast were this, (n_hold,)."""

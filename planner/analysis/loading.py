@@ -144,8 +144,11 @@ def _robust_fit(design: FloatArray, y: FloatArray, hold: IntArray, terms: int) -
         root = np.sqrt(weight) / sd
         solution = np.linalg.lstsq(design * root[:, None], y * root, rcond=None)[0]
     standard = weight * (y - design @ solution) / sd
-    # Huber's asymptotic covariance
-    factor = float((standard**2).sum() / freedom / np.mean(weight >= 1) ** 2)
+    whole = float(np.mean(weight >= 1))
+    # Huber's covariance with his correction for as many parameters as there are here, Robust Statistics (1981),
+    # section 7.6 (from memory)
+    correction = 1 + columns / count * (1 - whole) / whole
+    factor = float((standard**2).sum() / freedom / whole**2) * correction**2
     scaled = design / sd[:, None]
     return _Fit(
         terms=terms,

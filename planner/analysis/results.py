@@ -6,12 +6,13 @@ from dataclasses import dataclass
 import numpy as np
 from scipy import special
 
-from planner.analysis.contrast_decay import ShapeScore, compare_shapes, fit_contrast_decay
+from planner.analysis.contrast_decay import fit_contrast_decay
 from planner.analysis.data import NightData, choose, distinct_holds, fractions, shot_variance
 from planner.analysis.decay import Decay
 from planner.analysis.fringe import Fringes, fit_fringes
 from planner.analysis.holds import HoldContrast, combine
 from planner.analysis.loading import HoldAtoms, atoms_per_hold, fit_atom_decay
+from planner.analysis.shape_choice import ShapeScore, compare_shapes, fit_best
 from planner.analysis.shapes import EXPONENTIAL, Shape
 from planner.arrays import FloatArray, IntArray
 from planner.errors import NotEnoughData
@@ -60,7 +61,7 @@ class CurveResults:
     pooled_contrast: FloatArray  # (n_hold,) from quadratures averaged over the night, biased upwards; NaN if unsolved
     coherence: Decay | None
     why_no_coherence: str
-    shapes: tuple[ShapeScore, ...]  # compared where one exponential does not describe the contrast; else empty
+    shapes: tuple[ShapeScore, ...]  # compared where the shape of `coherence` does not describe the contrast; else empty
     lifetime: Decay | None
     why_no_lifetime: str
     noise: Noise | None
@@ -160,7 +161,7 @@ def _curve(
     data: NightData,
     request: int,
     settings: dict[str, float],
-    shape: Shape,
+    shape: Shape | None,
     compare: bool,
     detection: float,
     level: float,
@@ -178,7 +179,9 @@ def _curve(
         contrast = combine(flat, hold_of, holds, level=level)
         cells = fit_fringes(data.phase_rad, y, shot_variance(data, detection_noise_atoms=detection), which, len(holds))
         pooled = cells.contrast_plain
-        coherence = fit_contrast_decay(contrast, shape=shape, level=level)
+        coherence = (
+            fit_best(contrast, level=level) if shape is None else fit_contrast_decay(contrast, shape=shape, level=level)
+        )
         if compare and coherence.goodness_p < POOR_FIT:
             shapes = compare_shapes(contrast)
     except NotEnoughData as error:
@@ -224,7 +227,7 @@ def summarise(
     data: NightData,
     *,
     cut_flags: Sequence[str] = (),
-    shape: Shape = EXPONENTIAL,
+    shape: Shape | None = None,
     compare: bool = True,
     detection_noise_atoms: float = 0.0,
     level: float = 0.95,
@@ -234,8 +237,8 @@ def summarise(
     Args:
         data: the night.
         cut_flags: flags of the rig that exclude a shot, declared beforehand.
-        shape: how contrast falls; atoms always as one exponential.
-        compare: whether to try the other shapes where this one does not describe the contrast (a few seconds).
+        shape: how contrast falls, None for the one that describes it best; atoms always as one exponential.
+        compare: whether to compare all shapes where this one does not describe the contrast (a few seconds).
         detection_noise_atoms: what the detector adds to each output's count, one standard deviation; a weight only.
         level: coverage of the intervals.
 
@@ -285,6 +288,11 @@ def plain_words(curve: CurveResults) -> list[str]:
             "The coherence time is the hold at which contrast has fallen to 1/e of its short-hold value. It holds "
             "every loss of contrast, shot-to-shot phase noise too (which lowers contrast as exp(-s^2/2) and grows "
             "with hold): it is not decoherence alone."
+        )
+    if curve.coherence is not None and curve.coherence.shape != EXPONENTIAL:
+        words.append(
+            f"The contrast is read as {curve.coherence.shape.words}; its 1/e hold is not the time constant of any one "
+            "part of it."
         )
     if curve.coherence is not None and curve.coherence.goodness_p < POOR_FIT:
         shape = curve.coherence.shape

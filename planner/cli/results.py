@@ -18,10 +18,10 @@ if TYPE_CHECKING:
 @click.option("--cut-flag", "cut_flags", multiple=True, help="leave out shots that the rig flagged so; may be repeated")
 @click.option(
     "--shape",
-    type=click.Choice(["exponential", "levels-off", "power-law", "two-classes"]),
-    default="exponential",
+    type=click.Choice(["best", "exponential", "levels-off", "power-law", "two-classes"]),
+    default="best",
     show_default=True,
-    help="how contrast falls with hold",
+    help="how contrast falls with hold; best: the shape with the best Akaike score",
 )
 @click.option("--picture", type=click.Path(), help="draw contrast and atoms against hold: .png, .pdf or .svg")
 @click.option("--fringe-picture", type=click.Path(), help="draw the fringes of every hold: .png, .pdf or .svg")
@@ -52,7 +52,7 @@ def command(
     with open_logbook(logbook or default_place()) as book:
         row = book.night(night)
         data = NightData.from_columns(book.night_columns(row.id))
-    results = summarise(data, cut_flags=cut_flags, shape=SHAPES[shape])
+    results = summarise(data, cut_flags=cut_flags, shape=SHAPES.get(shape))
     drawn = draw(results, row.name, picture, fringe_picture)
     if as_json:
         click.echo(json.dumps({"night": row.name, "state": row.state, **document(results), "pictures": drawn}))

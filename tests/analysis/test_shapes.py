@@ -5,7 +5,8 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from planner.analysis.contrast_decay import compare_shapes, fit_contrast_decay
+from planner.analysis.contrast_decay import fit_contrast_decay
+from planner.analysis.shape_choice import compare_shapes, fit_best
 from planner.analysis.shapes import SHAPES, log_curve
 from planner.cli.results import command
 from planner.errors import NotEnoughData
@@ -58,6 +59,22 @@ def test_the_true_shape_scores_best(name: str) -> None:
         assert by_name["exponential"].predictive < by_name[name].predictive
 
 
+@pytest.mark.parametrize("name", FALLS)
+def test_the_best_shape_holds_the_true_time(name: str) -> None:
+    """The shape of the best score gives the true 1/e hold, and one exponential where nothing else is needed."""
+    fall = FALLS[name]
+    fine = np.geomspace(0.1, 100, 200_000)
+    truth = fine[np.argmin(np.abs(np.log(fall(fine)) + 1))]
+    fit = fit_best(hold_contrasts(0.5 * fall(HOLDS), sigma=2e-3, packets=12))
+    assert abs(fit.time_s - truth) < 0.75 * (fit.high_s - fit.low_s)  # three standard errors
+    assert (fit.shape.name == "exponential") == (name == "exponential")
+
+
+def test_three_holds_are_one_exponential() -> None:
+    """Where no hold is left to contradict another shape, one exponential is fitted."""
+    assert fit_best(hold_contrasts(np.array([0.5, 0.4, 0.3]))).shape.name == "exponential"
+
+
 def test_too_few_holds_for_a_shape() -> None:
     """Three holds cannot fix two exponentials, and that is said."""
     with pytest.raises(NotEnoughData, match="3 holds cannot fix two exponentials: it has 4 parameters"):
@@ -65,9 +82,9 @@ def test_too_few_holds_for_a_shape() -> None:
 
 
 def test_the_command_offers_every_shape() -> None:
-    """The choices of --shape are the shapes that there are."""
+    """The choices of --shape are the shapes that there are, and the best of them."""
     (option,) = [parameter for parameter in command.params if parameter.name == "shape"]
-    assert set(option.type.choices) == set(SHAPES)  # type: ignore[attr-defined]
+    assert set(option.type.choices) == {"best", *SHAPES}  # type: ignore[attr-defined]
 
 
 def test_a_growing_value_is_an_exponential() -> None:
