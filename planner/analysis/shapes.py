@@ -34,13 +34,15 @@ def _power_law(x: FloatArray, extra: FloatArray) -> FloatArray:
 
 
 def _two_classes(x: FloatArray, extra: FloatArray) -> FloatArray:
-    fast = special.expit(np.clip(extra[0], -30, 30))
+    odds = np.clip(extra[0], -30, 30)
+    fast = special.expit(odds)
     ratio = 1 + np.exp(np.clip(extra[1], -20, 7))
     # between the all-fast and the all-slow answer
     speed = optimize.brentq(
         lambda k: fast * np.exp(-k) + (1 - fast) * np.exp(-k / ratio) - np.exp(-1), 1 - 1e-9, ratio * (1 + 1e-9)
     )
-    return np.asarray(np.log(fast * np.exp(-speed * x) + (1 - fast) * np.exp(-speed * x / ratio)))
+    # by logarithms, so that a fall beyond the smallest number stays a fall
+    return np.asarray(np.logaddexp(special.log_expit(odds) - speed * x, special.log_expit(-odds) - speed * x / ratio))
 
 
 EXPONENTIAL = Shape(name="exponential", words="one exponential", log_fall=lambda x, extra: -x)
