@@ -140,7 +140,9 @@ def from_pure_shots(in_a: tuple[FloatArray, FloatArray], in_b: tuple[FloatArray,
     """
     for name, (a, b) in (("a", in_a), ("b", in_b)):
         if len(a) < 3 or len(b) < 3:
-            raise NotEnoughData(f"{min(len(a), len(b))} shots with all atoms in output {name}: three are needed at least")
+            raise NotEnoughData(
+                f"{min(len(a), len(b))} shots with all atoms in output {name}: three are needed at least"
+            )
     means = [[float(np.mean(column)) for column in pair] for pair in (in_a, in_b)]
     errors = [[float(np.std(column, ddof=1) / np.sqrt(len(column))) for column in pair] for pair in (in_a, in_b)]
 

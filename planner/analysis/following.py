@@ -16,6 +16,7 @@ from scipy import optimize
 from planner.arrays import FloatArray, IntArray
 from planner.errors import InputError, NotEnoughData
 
+SEARCHED = 300  # packets that the rates of the walks are searched on
 HYPOTHESES = 64  # kept after each packet; the weight beyond is lost
 NEARBY = np.arange(-2, 3)  # turns looked at about the nearest
 WIDE = 10.0  # rad^2, of a hold's phase before its first packet: wider than a circle
@@ -59,6 +60,19 @@ class Packets:
 
     def __len__(self) -> int:
         return len(self.time_s)
+
+    def stretch(self, most: int) -> "Packets":
+        """At most so many packets from the middle of the night, their holds numbered anew."""
+        first = max(0, (len(self) - most) // 2)
+        here = slice(first, first + most)
+        return Packets(
+            time_s=self.time_s[here],
+            hold=np.unique(self.hold[here], return_inverse=True)[1],
+            candidates=self.candidates[here],
+            sigma_rad=self.sigma_rad[here],
+            scale=self.scale[here],
+            known=self.known[here],
+        )
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -105,8 +119,7 @@ def follow(packets: Packets, walk: Walk, *, hypotheses: int = HYPOTHESES) -> Fol
     mean = np.zeros((1, size))
     covariance = np.diag([WIDE] * holds + [0.0, 0.0])
     weight = np.zeros(1)
-    turns, slopes = np.zeros((count, 1), dtype=np.int64), np.zeros((count, 1), dtype=np.int64)
-    predicted, surprise = np.zeros((count, 1)), np.zeros((count, 1))
+    steps: list[_Step] = []
     spread = np.empty(count)
     total, before = 0.0, packets.time_s[0]
     seen = np.zeros(holds, dtype=bool)
@@ -141,25 +154,52 @@ def follow(packets: Packets, walk: Walk, *, hypotheses: int = HYPOTHESES) -> Fol
         gain = across / variance
         mean = mean[parent] + off.ravel()[flat][:, None] * gain
         covariance = covariance - np.outer(gain, across)
-        turns, slopes, predicted, surprise = (one[:, parent] for one in (turns, slopes, predicted, surprise))
-        turns[n], slopes[n] = turn.ravel()[flat].astype(np.int64), slope
-        predicted[n], surprise[n] = expected[parent], off.ravel()[flat] / np.sqrt(variance)
+        steps.append(
+            _Step(
+                parent=parent,
+                turn=turn.ravel()[flat].astype(np.int64),
+                slope=slope,
+                predicted=expected[parent],
+                surprise=off.ravel()[flat] / np.sqrt(variance),
+            )
+        )
         spread[n] = np.sqrt(own)
     chosen = int(np.argmax(weight))
-    alike = (turns == turns[:, [chosen]]) & (slopes == slopes[:, [chosen]])
     share = np.exp(weight - weight.max())
-    finite = np.where(np.isfinite(packets.candidates), packets.candidates, 0.0)
+    share /= share.sum()
+    turns, slopes = np.empty(count, dtype=np.int64), np.empty(count, dtype=np.int64)
+    predicted, surprise, chance = np.empty(count), np.empty(count), np.empty(count)
+    line = np.arange(len(weight))  # where each surviving hypothesis stood after packet n
+    for n in range(count - 1, -1, -1):
+        step = steps[n]
+        mine = line[chosen]
+        turns[n], slopes[n] = step.turn[mine], step.slope[mine]
+        predicted[n], surprise[n] = step.predicted[mine], step.surprise[mine]
+        chance[n] = share[(step.turn[line] == turns[n]) & (step.slope[line] == slopes[n])].sum()
+        line = step.parent[line]
+    candidate = _column(packets, slopes)
     return Followed(
-        phase_rad=finite[np.arange(count), _column(packets, slopes[:, chosen])] + TURN * turns[:, chosen],
-        turns=turns[:, chosen],
-        candidate=_column(packets, slopes[:, chosen]),
-        predicted_rad=predicted[:, chosen],
+        phase_rad=packets.candidates[np.arange(count), candidate] + TURN * turns,
+        turns=turns,
+        candidate=candidate,
+        predicted_rad=predicted,
         predicted_sigma_rad=spread,
-        surprise=surprise[:, chosen],
-        chance=np.asarray((alike * share).sum(axis=1) / share.sum()),
+        surprise=surprise,
+        chance=chance,
         log_likelihood=total,
         walk=walk,
     )
+
+
+@dataclass(frozen=True, kw_only=True)
+class _Step:
+    """What each hypothesis kept after a packet says of that packet; arrays of shape (n_hypothesis,)."""
+
+    parent: IntArray  # where it stood after the packet before
+    turn: IntArray
+    slope: IntArray
+    predicted: FloatArray
+    surprise: FloatArray
 
 
 def _column(packets: Packets, slope: IntArray) -> IntArray:
@@ -171,23 +211,28 @@ def _column(packets: Packets, slope: IntArray) -> IntArray:
 def follow_fitted(packets: Packets) -> Followed:
     """The path with the rates of both walks that make the night likeliest.
 
-    Rates are searched on a grid from nothing to a turn between packets, and refined from its best point.
+    Rates are searched on a grid from nothing to a turn between packets and refined from its best point; of a long night
+    a stretch of SEARCHED packets from its middle is looked at for that.
     """
     if len(packets) < 3:
         return follow(packets, Walk(phase=0.0, acceleration=0.0))
+    searched = packets.stretch(SEARCHED)
     gap = max(float(np.median(np.diff(packets.time_s))), 1e-6)
     reach = max(float(np.abs(packets.scale).max()), 1e-300)
     noise = max(float(np.median(packets.sigma_rad)) ** 2, 1e-12)
     # in units of the phase variance that a packet's gap adds at the longest hold
-    steps = [0.0, *(noise * np.geomspace(1e-3, 1e3, 7))]
+    steps = [0.0, *(noise * np.geomspace(1e-2, 1e2, 5))]
     steps = [step for step in steps if step <= np.pi**2]
     moving = np.ptp(packets.scale) > 1e-9 * reach
 
-    def at(phase: float, acceleration: float, kept: int = 16) -> Followed:
-        return follow(packets, Walk(phase=phase / gap, acceleration=acceleration / gap / reach**2), hypotheses=kept)
+    def at(phase: float, acceleration: float, kept: int = 8) -> Followed:
+        return follow(searched, rates(phase, acceleration), hypotheses=kept)
+
+    def rates(phase: float, acceleration: float) -> Walk:
+        return Walk(phase=phase / gap, acceleration=acceleration / gap / reach**2)
 
     pairs = [(one, other) for one in steps for other in (steps if moving else [0.0])]
-    best = max(pairs, key=lambda pair: at(*pair).log_likelihood)
+    best: tuple[float, float] = max(pairs, key=lambda pair: at(*pair).log_likelihood)
     floor = noise * 1e-6
     free = [k for k in range(2) if best[k] > 0]
     if free:
@@ -204,4 +249,4 @@ def follow_fitted(packets: Packets) -> Followed:
         for k, log in zip(free, found.x, strict=True):
             refined[k] = float(np.exp(log))
         best = (refined[0], refined[1])
-    return at(best[0], best[1], HYPOTHESES)
+    return follow(packets, rates(*best))

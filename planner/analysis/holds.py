@@ -14,7 +14,7 @@ from scipy import special
 from planner.analysis.amplitude import amplitude_interval, debiased, zero_test
 from planner.analysis.fringe import Fringes, group_sums
 from planner.analysis.hold_noise import steady_noise
-from planner.arrays import FloatArray, IntArray
+from planner.arrays import BoolArray, FloatArray, IntArray
 from planner.errors import NotEnoughData
 
 # White noise makes a residual this unlikely in one of a million packets.
@@ -79,8 +79,9 @@ def combine(fringes: Fringes, which: IntArray, hold_s: FloatArray, *, level: flo
     unchecked = fringes.solved & (fringes.dof == 0) & (fringes.dof.max() > 0)
     fringes = replace(fringes, solved=fringes.solved & ~unchecked)
     label = which[fringes.solved]
-    held_back, fringes = _hold_back(fringes, label, size)
+    spoilt, fringes = hold_back(fringes, label, size)
     use = fringes.solved
+    held_back = np.bincount(label, weights=spoilt[use], minlength=size).astype(np.int64)
     count = np.bincount(label, minlength=size)
     inverse = 1 / fringes.quadrature_variance[use]
     raw = group_sums(label, fringes.amplitude_squared[use] * inverse, size)
@@ -123,8 +124,8 @@ def combine(fringes: Fringes, which: IntArray, hold_s: FloatArray, *, level: flo
     )
 
 
-def _hold_back(fringes: Fringes, label: IntArray, size: int) -> tuple[IntArray, Fringes]:
-    """How many fringes of each hold are held back, (size,), and the fringes with a larger variance for those.
+def hold_back(fringes: Fringes, label: IntArray, size: int) -> tuple[BoolArray, Fringes]:
+    """Which fringes are held back, (n_fringe,), and the fringes with a larger variance for those.
 
     A shot without a fringe (a laser out of lock) spoils its packet, and through the noise its whole hold. A packet's
     residual says so, and is independent of its contrast and phase; so a packet whose residual is beyond what white
@@ -134,8 +135,9 @@ def _hold_back(fringes: Fringes, label: IntArray, size: int) -> tuple[IntArray, 
     use = fringes.solved
     dof = fringes.dof[use].astype(np.float64)
     judged = dof > 0
+    out = np.zeros(len(fringes), dtype=np.bool_)
     if not judged.any():
-        return np.zeros(size, dtype=np.int64), fringes
+        return out, fringes
     unusual = np.where(judged, fringes.chi_squared[use] / np.maximum(special.chdtri(np.maximum(dof, 1), 0.5), 1e-9), 0)
     night = float(np.median(unusual[judged]))
     usual = np.full(size, night)
@@ -149,7 +151,8 @@ def _hold_back(fringes: Fringes, label: IntArray, size: int) -> tuple[IntArray, 
     fringes = replace(
         fringes, covariance=fringes.covariance * factor[:, None, None], chi_squared=fringes.chi_squared / factor
     )
-    return np.bincount(label, weights=spoilt, minlength=size).astype(np.int64), fringes
+    out[use] = spoilt
+    return out, fringes
 
 
 def _scatter(

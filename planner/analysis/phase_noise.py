@@ -65,8 +65,8 @@ def phase_noise(
 
     Args:
         theta, y, variance, group: as handed to `fit_fringes`, (n_shot,); variance: projection and known detection
-        noise. fringes: the fit. which: hold of each fringe, (n_fringe,). hold_s: (n_hold,). contrast: of each hold, without
-        its upward bias, (n_hold,), NaN where there is none. level: coverage of the intervals.
+        noise. fringes: the fit. which: hold of each fringe, (n_fringe,). hold_s: (n_hold,). contrast: of each hold,
+        without its upward bias, (n_hold,), NaN where there is none. level: coverage of the intervals.
 
     Returns:
         One entry for each hold whose fringes stand out and leave LEAST_FREEDOM residuals.
