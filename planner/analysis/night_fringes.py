@@ -18,6 +18,7 @@ from planner.arrays import FloatArray, IntArray
 from planner.errors import NotEnoughData
 
 CLEAR = 3.0  # amplitude over its error, of a packet whose phase is worth following
+SCAN = 0.01  # p value over all holds above which a night counts as one without a fringe
 ON_AXIS = 1e-6  # rad; two readout phases half a turn apart
 
 
@@ -118,8 +119,11 @@ def _one(
     noise = phase_noise(data.phase_rad, y, variance, whole, sound, hold_of_packet, holds, by_hold)
     if not noise:
         why["phase noise"] = "too few residuals, or no fringe stands out: what scatters cannot be told"
+    scan_p = scan_test(contrast.p_zero)
     given, followed, packet_hold = None, None, np.zeros(0)
     try:
+        if scan_p > SCAN:
+            raise NotEnoughData("over all holds together no fringe stands out of the noise")
         scale = np.ones(len(data)) if scales is None else scales(data)
         tide = np.zeros(len(data)) if known is None else known(data)
         given = _phases(data, y, variance, whole, weighted, hold_of_packet, by_hold, contrast, scale, tide)
@@ -129,6 +133,8 @@ def _one(
         why["path"] = str(error)
     detector = None
     try:
+        if scan_p > SCAN:
+            raise NotEnoughData("there is no fringe that the counts could follow")
         usable = flat.solved & (flat.contrast_plain / 2 > CLEAR * np.sqrt(flat.quadrature_variance))
         shown = np.where(usable[group], place, np.nan)
         detector = efficiency_ratio(data.atoms_a, data.atoms_b, shown, group)
@@ -139,7 +145,7 @@ def _one(
         request=request,
         settings=settings,
         contrast=contrast,
-        scan_p=scan_test(contrast.p_zero),
+        scan_p=scan_p,
         offset=offset,
         offset_error=offset_error,
         noise=noise,

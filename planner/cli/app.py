@@ -26,6 +26,10 @@ COMMANDS: dict[str, tuple[str, str]] = {
     "rig": ("planner.cli.rig", "Start the stand-in rig, or show what a rig says of itself"),
     "nights": ("planner.cli.nights", "List the nights in the logbook"),
     "results": ("planner.cli.results", "Say what a night measured: contrast, coherence time, lifetime"),
+    "fringes": (
+        "planner.cli.fringes",
+        "Look at a night's fringes: which stand out, their phase, their noise, the detector",
+    ),
     "export": ("planner.cli.export", "Write a night as a table for other programs"),
     "record": ("planner.cli.record", "Record results of a rig with no link, from a CSV or typed in"),
 }
