@@ -10,7 +10,7 @@ how large it gets by chance is drawn from the same holds and errors.
 from dataclasses import dataclass
 
 import numpy as np
-from scipy import special
+from scipy import optimize, special
 
 from planner.analysis.contrast_decay import expected_squared
 from planner.analysis.decay import Decay, log_slopes
@@ -28,12 +28,13 @@ class Modulation:
     """The best period of those looked at; arrays of shape (n_period,)."""
 
     periods_s: FloatArray
-    gains: FloatArray  # fall of the sum of squares
+    gains: FloatArray  # fall of the sum of squares over the mean square left
     period_s: float
     depth: float
     depth_error: float
     depth_limit: float  # upper limit at `level` for a modulation of that period
     gain: float
+    scatter: float  # relative, of holds about the fall beyond their packets' noise
     p: float  # of so large a gain anywhere among the periods, if there is no modulation
     alarm_gain: float  # that 1 % of nights without a modulation would pass
     level: float
@@ -71,39 +72,67 @@ def search_modulation(
         raise NotEnoughData(f"{len(holds)} holds: a modulation beside {fall.shape.words} needs {nuisance + 3} at least")
     expected = expected_squared(holds, fall.shape, fall.parameters)
     error = np.sqrt(holds.expected_squared_variance(expected)) / (2 * expected)
-    value = (holds.squared / expected - 1) / 2 / error
+    change = (holds.squared / expected - 1) / 2
     slopes = log_slopes(fall.shape, fall.parameters, holds.hold_s, np.sqrt(np.diag(fall.covariance)))
+    scatter = _scatter(change, error, slopes)
+    error = np.hypot(error, scatter)
+    value = change / error
     known, _ = np.linalg.qr(slopes / error[:, None])
     periods = np.array([period_s]) if period_s is not None else _periods(holds.hold_s, shortest_s, longest_s)
     if not (np.isfinite(periods).all() and (periods > 0).all()):
         raise InputError(f"a period is a positive time, not {period_s} s")
     basis = _basis(holds.hold_s, error, known, periods)
-    gains = _gains(basis, value[None, :])[0]
+    freedom = len(holds) - nuisance - 2
+    rest = value - known @ (known.T @ value)
+    gains = _gains(basis, rest[None, :], freedom)[0]
     best = int(np.argmax(gains))
     if period_s is not None:
-        p, alarm = float(special.chdtrc(2, gains[0])), float(special.chdtri(2, 0.01))
+        p, alarm = float(special.fdtrc(2, freedom, gains[0] / 2)), 2 * float(special.fdtri(2, freedom, 0.99))
     else:
         rng = np.random.default_rng(seed)
-        largest = np.concatenate(
-            [_gains(basis, rng.standard_normal((500, len(holds)))).max(axis=1) for _ in range(DRAWS // 500)]
-        )
+        drawn = [rng.standard_normal((500, len(holds))) for _ in range(DRAWS // 500)]
+        largest = np.concatenate([_gains(basis, one - (one @ known) @ known.T, freedom).max(axis=1) for one in drawn])
         p = float((1 + (largest >= gains[best]).sum()) / (1 + DRAWS))
         alarm = float(np.quantile(largest, 0.99))
     depth, depth_error = _depth(holds.hold_s, error, known, value, float(periods[best]))
-    # the squared length of two normal numbers with this mean: the largest mean that so short a length leaves open
-    limit = depth_error * float(special.chndtrinc(np.asarray((depth / depth_error) ** 2), 2.0, 1 - level)) ** 0.5
+    excess = float(rest @ rest) / (freedom + gains[best])
+    # the largest depth that leaves so small an F ratio a chance of 1 - level
+    ratio = (depth / depth_error) ** 2 / excess / 2
+    limit = depth_error * float(np.sqrt(excess * special.ncfdtrinc(2.0, float(freedom), 1 - level, ratio)))
     return Modulation(
         periods_s=periods,
         gains=gains,
         period_s=float(periods[best]),
         depth=depth,
-        depth_error=depth_error,
+        depth_error=depth_error * float(np.sqrt(excess)),
         depth_limit=limit,
         gain=float(gains[best]),
+        scatter=scatter,
         p=p,
         alarm_gain=alarm,
         level=level,
     )
+
+
+def _scatter(change: FloatArray, error: FloatArray, slopes: FloatArray) -> float:
+    """Scatter that makes the sum of squares about the fall what it should be; 0 if it is no larger without.
+
+    References:
+        Paule and Mandel, J. Res. Natl. Bur. Stand. 87, 377 (1982) (from memory).
+    """
+    freedom = len(change) - slopes.shape[1]
+
+    def left(variance: float) -> float:
+        root = np.sqrt(error**2 + variance)
+        known, _ = np.linalg.qr(slopes / root[:, None])
+        rest = change / root - known @ (known.T @ (change / root))
+        return float(rest @ rest) - freedom
+
+    if left(0.0) <= 0:
+        return 0.0
+    top = float((change**2).sum() + (error**2).max())  # with so much no sum of squares is left to speak of
+    found = float(optimize.brentq(left, 0.0, top)) if left(top) < 0 else top
+    return found**0.5
 
 
 def _periods(hold_s: FloatArray, shortest_s: float | None, longest_s: float | None) -> FloatArray:
@@ -135,9 +164,11 @@ def _basis(hold_s: FloatArray, error: FloatArray, known: FloatArray, periods: Fl
     return np.stack([first, second], axis=2)
 
 
-def _gains(basis: FloatArray, values: FloatArray) -> FloatArray:
-    """Gain of each period for each row of values (n, n_hold): (n, n_period)."""
-    return np.asarray((values @ basis[:, :, 0]) ** 2 + (values @ basis[:, :, 1]) ** 2)
+def _gains(basis: FloatArray, rest: FloatArray, freedom: int) -> FloatArray:
+    """Gain of each period for each row of values (n, n_hold) without what the fall takes up: (n, n_period)."""
+    fallen = (rest @ basis[:, :, 0]) ** 2 + (rest @ basis[:, :, 1]) ** 2
+    left = (rest**2).sum(axis=1)[:, None] - fallen
+    return np.asarray(freedom * fallen / np.maximum(left, 1e-300))
 
 
 def _depth(

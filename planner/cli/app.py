@@ -30,6 +30,7 @@ COMMANDS: dict[str, tuple[str, str]] = {
         "planner.cli.fringes",
         "Look at a night's fringes: which stand out, their phase, their noise, the detector",
     ),
+    "decay": ("planner.cli.decay", "Fit how contrast and atom number fall with hold: every shape, compared"),
     "export": ("planner.cli.export", "Write a night as a table for other programs"),
     "record": ("planner.cli.record", "Record results of a rig with no link, from a CSV or typed in"),
 }

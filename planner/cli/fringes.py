@@ -1,7 +1,6 @@
 """`nightfringe fringes`: is there a fringe, how did its phase walk, what scatters, what does the detector do."""
 
 import math
-from contextlib import suppress
 from typing import TYPE_CHECKING, Any
 
 import click
@@ -41,20 +40,17 @@ def command(
     from planner.analysis.data import NightData
     from planner.analysis.night_fringes import report_fringes
     from planner.analysis.scale import shot_scales
-    from planner.errors import NotEnoughData, ProblemsFound
+    from planner.cli.night_sequences import sequences_of
+    from planner.errors import NotEnoughData
     from planner.logbook import default_place, open_logbook
     from planner.plots import style
-    from planner.sequence.reader import parse_sequence
 
     if picture:
         style.check_place(picture)
     with open_logbook(logbook or default_place()) as book:
         row = book.night(night)
         data = NightData.from_columns(book.night_columns(row.id))
-        sequences = {}
-        for request in book.requests(row.id):
-            with suppress(ProblemsFound):  # a night that was only recorded may have no sequence to speak of
-                sequences[request.number] = parse_sequence(request.sequence_text, request.title)
+        sequences = sequences_of(book, row.id)
 
     def scales(mine: Any) -> Any:
         return shot_scales(mine, sequences[int(mine.request[0])])
@@ -184,6 +180,8 @@ def plain_words(report: "FringeReport", *, scaled: bool) -> list[str]:
 
 def document(report: "FringeReport") -> dict[str, Any]:
     """One curve's fringes for JSON: SI units, null where there is no number."""
+    from planner.cli.results import json_number
+
     holds = report.contrast
     noise = {one.hold_s: one for one in report.noise}
     rows = []
@@ -193,10 +191,10 @@ def document(report: "FringeReport") -> dict[str, Any]:
             {
                 "hold_s": float(hold),
                 "fringes": int(holds.fringes[k]),
-                "contrast": _number(holds.value[k]),
-                "p_zero": _number(holds.p_zero[k]),
-                "offset": _number(report.offset[k]),
-                "offset_error": _number(report.offset_error[k]),
+                "contrast": json_number(holds.value[k]),
+                "p_zero": json_number(holds.p_zero[k]),
+                "offset": json_number(report.offset[k]),
+                "offset_error": json_number(report.offset_error[k]),
                 "phase_noise_rad": None if one is None or not one.told_apart else one.sigma_rad,
                 "phase_noise_low_rad": None if one is None else one.low_rad,
                 "phase_noise_high_rad": None if one is None else one.high_rad,
@@ -227,7 +225,3 @@ def document(report: "FringeReport") -> dict[str, Any]:
         else {"efficiency_ratio": ratio.value, "low": ratio.low, "high": ratio.high, "shots": ratio.shots},
         "why_not": report.why_not,
     }
-
-
-def _number(value: Any) -> float | None:
-    return float(value) if math.isfinite(value) else None

@@ -194,14 +194,14 @@ def _curve_document(curve: "CurveResults") -> dict[str, Any]:
             ):
                 key = {"value": "contrast", "low": "contrast_low", "high": "contrast_high", "plain": "contrast_plain"}
                 key |= {"squared": "contrast_squared", "noise": "noise_variance_ratio"}
-                entry[key.get(name, name)] = _number(getattr(curve.contrast, name)[at])
-            entry["contrast_pooled"] = _number(curve.pooled_contrast[number])
+                entry[key.get(name, name)] = json_number(getattr(curve.contrast, name)[at])
+            entry["contrast_pooled"] = json_number(curve.pooled_contrast[number])
         at = None if curve.atoms is None else _index(curve.atoms.hold_s, hold)
         if curve.atoms is not None and at is not None:
             entry |= {
-                "atoms": _number(curve.atoms.atoms[at]),
-                "atoms_low": _number(curve.atoms.low[at]),
-                "atoms_high": _number(curve.atoms.high[at]),
+                "atoms": json_number(curve.atoms.atoms[at]),
+                "atoms_low": json_number(curve.atoms.low[at]),
+                "atoms_high": json_number(curve.atoms.high[at]),
             }
         holds.append(entry)
     noise = curve.noise
@@ -212,35 +212,37 @@ def _curve_document(curve: "CurveResults") -> dict[str, Any]:
         "packets": curve.packets,
         "packets_without_fringe": curve.unsolved,
         "holds": holds,
-        "coherence": _decay_document(curve.coherence),
+        "coherence": decay_document(curve.coherence),
         "why_no_coherence": curve.why_no_coherence or None,
         "shapes": [
             {
                 "shape": entry.shape.name,
                 "parameters": entry.parameters,
-                "log_likelihood": _number(entry.log_likelihood),
-                "score": _number(entry.score),
-                "predictive": _number(entry.predictive),
+                "log_likelihood": json_number(entry.log_likelihood),
+                "score": json_number(entry.score),
+                "predictive": json_number(entry.predictive),
             }
             for entry in curve.shapes
         ],
-        "lifetime": _decay_document(curve.lifetime),
+        "lifetime": decay_document(curve.lifetime),
         "why_no_lifetime": curve.why_no_lifetime or None,
         "noise": None
         if noise is None
-        else {name: _number(getattr(noise, name)) for name in ("multiple", "low", "high", "typical", "dof")},
+        else {name: json_number(getattr(noise, name)) for name in ("multiple", "low", "high", "typical", "dof")},
     }
 
 
-def _decay_document(decay: "Decay | None") -> dict[str, Any] | None:
+def decay_document(decay: "Decay | None") -> dict[str, Any] | None:
+    """A fall as one JSON object, times in s."""
     if decay is None:
         return None
     names = ("time_s", "low_s", "high_s", "start", "start_low", "start_high", "goodness", "goodness_dof", "goodness_p")
-    numbers = {name: _number(getattr(decay, name)) for name in names}
-    return {"shape": decay.shape.name, **numbers, "parameters": [_number(value) for value in decay.parameters]}
+    numbers = {name: json_number(getattr(decay, name)) for name in names}
+    return {"shape": decay.shape.name, **numbers, "parameters": [json_number(value) for value in decay.parameters]}
 
 
-def _number(value: Any) -> float | int | None:
+def json_number(value: Any) -> float | int | None:
+    """A number as JSON has it: null where it is not finite."""
     number = value.item() if hasattr(value, "item") else value
     if isinstance(number, int):
         return number
