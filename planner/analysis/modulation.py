@@ -126,13 +126,13 @@ def _scatter(change: FloatArray, error: FloatArray, slopes: FloatArray) -> float
         root = np.sqrt(error**2 + variance)
         known, _ = np.linalg.qr(slopes / root[:, None])
         rest = change / root - known @ (known.T @ (change / root))
-        return float(rest @ rest) - freedom
+        return float(rest @ rest - freedom)
 
     if left(0.0) <= 0:
         return 0.0
     top = float((change**2).sum() + (error**2).max())  # with so much no sum of squares is left to speak of
-    found = float(optimize.brentq(left, 0.0, top)) if left(top) < 0 else top
-    return found**0.5
+    found = top if left(top) >= 0 else float(optimize.brentq(left, 0.0, top))
+    return float(np.sqrt(found))
 
 
 def _periods(hold_s: FloatArray, shortest_s: float | None, longest_s: float | None) -> FloatArray:
