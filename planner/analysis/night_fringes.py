@@ -12,6 +12,7 @@ from planner.analysis.detection import EfficiencyRatio, efficiency_ratio
 from planner.analysis.following import Followed, Packets, follow_fitted
 from planner.analysis.fringe import Fringes, fit_fringes
 from planner.analysis.holds import HoldContrast, combine, hold_back
+from planner.analysis.packet_drift import packet_bias
 from planner.analysis.phase_noise import PhaseNoise, phase_noise
 from planner.analysis.results import curve_labels, fringe_groups
 from planner.arrays import FloatArray, IntArray
@@ -33,6 +34,7 @@ class FringeReport:
     offset: FloatArray  # (n_hold,) mean of the packets' offsets, aligned with `contrast`
     offset_error: FloatArray
     noise: tuple[PhaseNoise, ...]
+    drift_bias: FloatArray  # (n_hold,) relative, what the walk inside packets does to the squared contrast; NaN unknown
     set_aside: int  # packets that scatter beyond anything usual: not in `noise`, and of little weight in the path
     packets: Packets | None
     followed: Followed | None
@@ -131,6 +133,13 @@ def _one(
         packet_hold = holds[given.hold]
     except NotEnoughData as error:
         why["path"] = str(error)
+    drift_bias = np.full(len(contrast), np.nan)
+    if followed is not None and given is not None:
+        each = packet_bias(data.phase_rad, data.mid_s, group, count)
+        for k, hold in enumerate(np.searchsorted(holds, contrast.hold_s)):
+            rate = followed.walk.phase + followed.walk.acceleration * float(np.mean(scale[which == hold] ** 2))
+            mine = each[flat.solved & (hold_of == hold)]
+            drift_bias[k] = rate * mine.mean()
     detector = None
     try:
         if scan_p > SCAN:
@@ -149,6 +158,7 @@ def _one(
         offset=offset,
         offset_error=offset_error,
         noise=noise,
+        drift_bias=drift_bias,
         set_aside=int(spoilt.sum()),
         packets=given,
         followed=followed,

@@ -103,13 +103,14 @@ def show(report: "FringeReport", console: "Console", *, several: bool, scaled: b
         table.add_column(heading, justify="right", no_wrap=True)
     noise = {one.hold_s: one for one in report.noise}
     holds = report.contrast
+    inside = [bias if math.isfinite(bias) else 0.0 for bias in report.drift_bias.tolist()]
     for k, hold in enumerate(holds.hold_s):
         one = noise.get(float(hold))
         cells = ["", ""]
         if one is not None and one.told_apart:
             cells = [
                 f"{one.sigma_rad:.3f} ({one.low_rad:.3f}-{one.high_rad:.3f})",
-                f"{holds.value[k] * one.contrast_factor:.3f}",
+                f"{holds.value[k] * one.contrast_factor / (1 + inside[k]) ** 0.5:.3f}",
             ]
         elif one is not None:
             cells = [f"below {one.high_rad:.3f}", ""]
@@ -152,6 +153,13 @@ def plain_words(report: "FringeReport", *, scaled: bool) -> list[str]:
         words.append(f"It walked by {' and '.join(walk)} (square root of time), as the night itself says.")
         if not scaled:
             words.append("The sequence does not say its separation, so all holds share one walk of the phase.")
+    known = [bias for bias in report.drift_bias.tolist() if math.isfinite(bias)]
+    if known:
+        most = max(known, key=abs)
+        words.append(
+            f"That walk inside packets changes squared contrasts by {most * 100:+.2g} % at most (worked out from each "
+            "packet's own order; the corrected contrast has it taken off)."
+        )
     if any(one.told_apart for one in report.noise):
         words.append(
             "Phase noise is what makes shots scatter on the fringe's slopes and not at its top; it lowers contrast as "
@@ -195,6 +203,7 @@ def document(report: "FringeReport") -> dict[str, Any]:
                 "p_zero": json_number(holds.p_zero[k]),
                 "offset": json_number(report.offset[k]),
                 "offset_error": json_number(report.offset_error[k]),
+                "drift_bias_of_squared": json_number(report.drift_bias[k]),
                 "phase_noise_rad": None if one is None or not one.told_apart else one.sigma_rad,
                 "phase_noise_low_rad": None if one is None else one.low_rad,
                 "phase_noise_high_rad": None if one is None else one.high_rad,
