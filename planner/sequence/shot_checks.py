@@ -10,6 +10,9 @@ import numpy as np
 
 from planner.arrays import BoolArray, FloatArray, IntArray
 from planner.errors import Problem
+from planner.physics.atoms import atom
+from planner.physics.gravity import site_gravity
+from planner.physics.interferometer import hold_phase_rate
 from planner.quantities import format_quantity
 from planner.sequence.against_rig import place_of
 from planner.sequence.model import Line, Rig, Sequence
@@ -17,9 +20,6 @@ from planner.sequence.timeline import FAR, Edges, Track, value_of, work_out
 from planner.sequence.windows import worst_window
 
 HOUR_S = 3600.0
-STANDARD_GRAVITY = 9.80665  # m/s^2; source: CGPM 1901, resolution 2 (from memory)
-HBAR = 1.054571817e-34  # J s; source: CODATA 2018, exact (from memory)
-ATOMIC_MASS = 1.66053906660e-27  # kg; source: CODATA 2018 (from memory)
 SLACK = 1e-9  # relative; levels and rates computed by arithmetic miss a limit they mean to touch by rounding
 
 
@@ -51,11 +51,9 @@ class ShotChecks:
         self.problems: list[Problem] = []
         self.rounding = Rounding()
         self._seen: set[tuple[str, str]] = set()
-        # phase per second and metre: m g cos(angle to the vertical) / hbar. The mass number is the mass in atomic
-        # mass units to 0.2 %, plenty for a tolerance.
-        mass_kg = int(sequence.atom.split("-")[1]) * ATOMIC_MASS
-        angle = np.deg2rad(rig.axis_to_vertical_deg)
-        self._phase_rate = mass_kg * STANDARD_GRAVITY * abs(np.cos(angle)) / HBAR
+        # phase per second and metre of separation: m g cos(angle to the vertical) / hbar
+        along = abs(np.cos(np.deg2rad(rig.axis_to_vertical_deg))) * site_gravity(rig.latitude_deg, rig.height_m)
+        self._phase_rate = hold_phase_rate(atom(sequence.atom).mass_kg, 1.0, float(along))
         self._columns: Mapping[str, FloatArray] = {}
 
     def look_at(self, columns: Mapping[str, FloatArray], count: int, separation_m: FloatArray | None) -> IntArray:
