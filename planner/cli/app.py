@@ -20,6 +20,7 @@ COMMANDS: dict[str, tuple[str, str]] = {
     "allocate": ("planner.cli.allocate", "Share out rig time for a goal: holds and packets, proved"),
     "forecast": ("planner.cli.forecast", "Forecast the errors of a night against time, with a band"),
     "order": ("planner.cli.order", "Put the shots of a sequence in a running order"),
+    "tide": ("planner.cli.tide", "Work out the solid-earth tide at the site of a rig file"),
     "timeline": ("planner.cli.timeline", "Draw the timeline of one shot"),
     "rehearse": ("planner.cli.rehearse", "Rehearse a whole night on the stand-in rig"),
     "run": ("planner.cli.run", "Book a night and run it, or go on where one stopped"),

@@ -21,6 +21,7 @@ if TYPE_CHECKING:
     default=0.0,
     help="atoms of noise that the detector adds to each output, so that it is not taken for phase noise",
 )
+@click.option("--tide", is_flag=True, help="take the tide at the rig's site off before the phase is followed")
 @click.option("--picture", type=click.Path(), help="draw the path of the phase: .png, .pdf or .svg")
 @click.option("--json", "as_json", is_flag=True, help="print one JSON object")
 def command(
@@ -28,6 +29,7 @@ def command(
     logbook: str | None,
     cut_flags: tuple[str, ...],
     detection_noise: float,
+    tide: bool,
     picture: str | None,
     as_json: bool,
 ) -> None:
@@ -51,6 +53,7 @@ def command(
         row = book.night(night)
         data = NightData.from_columns(book.night_columns(row.id))
         sequences = sequences_of(book, row.id)
+        rig_text = next((request.rig_text for request in book.requests(row.id)), "")
 
     def scales(mine: Any) -> Any:
         return shot_scales(mine, sequences[int(mine.request[0])])
@@ -61,7 +64,13 @@ def command(
         given = scales
     except (NotEnoughData, KeyError):
         given = None  # holds then share one walk of the phase, and that is said
-    reports = report_fringes(data, cut_flags=cut_flags, detection_noise_atoms=detection_noise, scales=given)
+    reports = report_fringes(
+        data,
+        cut_flags=cut_flags,
+        detection_noise_atoms=detection_noise,
+        scales=given,
+        known=_tide_of(rig_text, row.begins_us) if tide else None,
+    )
     drawn = _draw(reports, row.name, picture)
     if as_json:
         curves = [document(report) for report in reports]
@@ -75,6 +84,18 @@ def command(
         show(report, console, several=len(reports) > 1, scaled=given is not None)
     for place in drawn:
         console.print(f"picture: {place}", markup=False, soft_wrap=True)
+
+
+def _tide_of(rig_text: str, begins_us: int | None) -> Any:
+    """A function that gives the tide at the shots of a night, m/s^2."""
+    from planner.errors import InputError
+    from planner.sequence.rigfile import parse_rig
+    from planner.sequence.site_tide import tide_along
+
+    if not rig_text or begins_us is None:
+        raise InputError("--tide needs a night with a rig file and a beginning; this one has no such thing on record")
+    rig = parse_rig(rig_text, "the night's rig file")
+    return lambda data: tide_along(rig, begins_us * 1e-6 + data.mid_s)
 
 
 def _draw(reports: "tuple[FringeReport, ...]", name: str, picture: str | None) -> list[str]:
