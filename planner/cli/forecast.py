@@ -1,13 +1,19 @@
 """`nightfringe forecast`: what a night will give, before it is run."""
 
 import json
+from collections.abc import Callable
 from typing import TYPE_CHECKING, Any
 
 import click
 
+from planner.cli.spreading import spread_over
+
 if TYPE_CHECKING:
+    from planner.arrays import FloatArray
     from planner.design.allocation.knowledge import Knowledge
+    from planner.design.allocation.signal import Scale
     from planner.design.forecast.curve import Forecast, Progress
+    from planner.design.forecast.whole_nights import Played
 
 TIMES_SHOWN = 6
 
@@ -16,19 +22,26 @@ TIMES_SHOWN = 6
 @click.argument("file", type=click.Path())
 @click.option("--seed", type=click.IntRange(min=0), default=1, show_default=True, help="of the order and of rehearsals")
 @click.option("--trials", type=click.IntRange(0, 1_000_000), default=0, help="also rehearse so many whole nights")
+@click.option("--jobs", type=click.IntRange(1, 256), default=1, show_default=True, help="cores that rehearse")
+@click.option("--cluster", help="rehearse on the Dask cluster at this address; trusted networks only")
 @click.option("--picture", type=click.Path(), help="draw error against time: .png, .pdf or .svg")
 @click.option("--json", "as_json", is_flag=True, help="print one JSON object")
-def command(file: str, seed: int, trials: int, picture: str | None, as_json: bool) -> None:
+def command(
+    file: str, seed: int, trials: int, jobs: int, cluster: str | None, picture: str | None, as_json: bool
+) -> None:
     """Forecast the errors of a night against time, with a band.
 
     The night's own order says which packets are complete when. The band (90 percent) is what the uncertainty of
-    [expected] makes of it. Rehearsals draw every shot of every night and analyse it, as a check of the formulas.
+    [expected] makes of it. Rehearsals draw every shot of every night, drift with them, and analyse it: a check of the
+    formulas. They give the same numbers on any number of cores. A cluster runs whatever it is sent: use one on a
+    network that you trust.
     """
     from planner.design.allocation.choose import scale_of
     from planner.design.allocation.knowledge import knowledge_of
     from planner.design.allocation.signal import Scale
     from planner.design.forecast.curve import alternatives, forecasts, phase_information, progress_of
-    from planner.design.ordering import make_order, quality_of
+    from planner.design.forecast.whole_nights import Played, played, signal_widening
+    from planner.design.ordering import make_order
     from planner.sequence.compiler import compile_sequence
     from planner.sequence.reader import read_sequence
     from planner.sequence.rigfile import rig_of
@@ -44,15 +57,32 @@ def command(file: str, seed: int, trials: int, picture: str | None, as_json: boo
     known = knowledge_of(sequence, rig, float((table.duration_s - table.hold_s).mean()))
     progress = progress_of(order, table)
     scale: Scale | None = None
+    night: Played | None = None
     widen = {"decay": order.figures["additive_mean"]}
     if sequence.goal.wanted and "separation" in sequence.roles:
         scale = scale_of(sequence, rig)
-        figures = quality_of(order, table, sequence).of_parity(sequence.goal.wanted)
-        widen["signal"] = figures["additive_mean"] + figures["coupled_mean"]
-    information = phase_information(table.phase_rad)
-    found = forecasts(known, progress, scale=scale, information=information, widen=widen, seed=seed)
+        night = played(order, table, sequence)
+        widen["signal"] = signal_widening(known, scale, night)
+    found = forecasts(
+        known,
+        progress,
+        scale=scale,
+        information=phase_information(table.phase_rad),
+        widen=widen,
+        goal=sequence.goal.kind,
+        details=sequence.goal.details,
+        seed=seed,
+    )
     others = [] if scale is None or len(progress.hold_s) > 1 else alternatives(known, scale, float(progress.hold_s[0]))
-    rehearsed = _rehearse(known, progress, trials, seed) if trials and len(progress.hold_s) > 1 else None
+    rehearsed: list[dict[str, Any]] = []
+    if trials:
+        with spread_over(jobs, cluster) as spread:
+            if len(progress.hold_s) > 1:
+                rehearsed.append(_rehearse_decay(known, progress, trials, seed, spread))
+            if scale is not None:
+                rehearsed.append(
+                    _rehearse_signal(known, scale, played(order, table, sequence), found, trials, seed, spread)
+                )
     target = sequence.goal.target if sequence.goal.kind in ("signal", "coherence", "budget") else None
     reached = _reached(found, sequence.goal.kind, target, sequence.goal.target_unit, known)
     if picture is not None:
@@ -112,27 +142,67 @@ def _reached(
     }
 
 
-def _rehearse(known: "Knowledge", progress: "Progress", trials: int, seed: int) -> dict[str, Any]:
+def _rehearse_decay(
+    known: "Knowledge", progress: "Progress", trials: int, seed: int, spread: Callable[..., Any]
+) -> dict[str, Any]:
     """Whole nights drawn and analysed: how far the coherence times found stray from the truth, against the forecast."""
-    import time
+    from functools import partial
 
-    import numpy as np
-
+    from planner.design.forecast.blocks import in_blocks
     from planner.design.forecast.curve import decay_errors
     from planner.design.forecast.rehearsal import Night, rehearse_coherence
 
     night = Night(hold_s=progress.hold_s, packets=progress.counts[-1], phases=int(progress.shots[0]))
-    began = time.perf_counter()
-    times = rehearse_coherence(known, night, trials, seed)
-    seconds = time.perf_counter() - began
     error = float(decay_errors(known, progress)["coherence time"][-1])
-    shots = trials * int((progress.counts[-1] * progress.shots).sum())
+    shots = int((progress.counts[-1] * progress.shots).sum())
+    return _compared(
+        "coherence time",
+        "s",
+        lambda: in_blocks(partial(rehearse_coherence, rig=known, night=night), trials, seed, spread),
+        known.coherence_s,
+        error,
+        shots,
+    )
+
+
+def _rehearse_signal(
+    known: "Knowledge",
+    scale: "Scale",
+    night: "Played",
+    found: "list[Forecast]",
+    trials: int,
+    seed: int,
+    spread: Callable[..., Any],
+) -> dict[str, Any]:
+    """The same for the signal, along the running order and with the declared drift; the true signal is none."""
+    from functools import partial
+
+    from planner.design.forecast.blocks import in_blocks
+    from planner.design.forecast.whole_nights import rehearse_signal
+
+    task = partial(rehearse_signal, rig=known, scale=scale, night=night, signal=0.0)
+    error = float(next(one for one in found if one.name == "signal").error[-1])
+    return _compared("signal", "m/s^2", lambda: in_blocks(task, trials, seed, spread), 0.0, error, len(night.mid_s))
+
+
+def _compared(
+    name: str, unit: str, rehearse: Callable[[], "FloatArray"], truth: float, error: float, shots: int
+) -> dict[str, Any]:
+    import time
+
+    import numpy as np
+
+    began = time.perf_counter()
+    values = rehearse()
+    seconds = time.perf_counter() - began
     return {
-        "trials": trials,
-        "coherence_time_s": float(np.mean(times)),
-        "rms_error_s": float(np.sqrt(np.mean((times - known.coherence_s) ** 2))),
-        "forecast_error_s": error,
-        "shots_per_s": shots / seconds,
+        "quantity": name,
+        "unit": unit,
+        "trials": len(values),
+        "mean": float(np.mean(values)),
+        "rms_error": float(np.sqrt(np.mean((values - truth) ** 2))),
+        "forecast_error": error,
+        "shots_per_s": len(values) * shots / seconds,
     }
 
 
@@ -166,13 +236,10 @@ def _show(summary: dict[str, Any], found: "list[Forecast]") -> None:
         change = 100 * (other["hours_ratio"] - 1)
         words = f"{-change:.0f} % fewer" if change < 0 else f"{change:.0f} % more"
         console.print(f"hold {other['hold_s']:.3g} s instead: {words} hours for the same error", markup=False)
-    rehearsed = summary["rehearsals"]
-    if rehearsed:
-        console.print(
-            f"{rehearsed['trials']:,} rehearsed nights stray {rehearsed['rms_error_s']:.3g} s from the true "
-            f"coherence time; forecast {rehearsed['forecast_error_s']:.3g} s "
-            f"({rehearsed['shots_per_s'] / 1e6:.0f} million shots a second)",
-            markup=False,
-        )
+    for rehearsal in summary["rehearsals"]:
+        strays = f"{rehearsal['quantity']} strays {rehearsal['rms_error']:.3g} {rehearsal['unit']} from the truth"
+        speed = f"{rehearsal['shots_per_s'] / 1e6:.0f} million shots a second"
+        forecast = f"forecast {rehearsal['forecast_error']:.3g}"
+        console.print(f"{rehearsal['trials']:,} rehearsed nights: {strays}, {forecast} ({speed})", markup=False)
     if summary["picture"]:
         console.print(f"picture: {summary['picture']}", markup=False, soft_wrap=True)

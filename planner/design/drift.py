@@ -14,7 +14,7 @@ import numpy as np
 
 from planner.arrays import FloatArray
 from planner.design.acceleration import noise_per_acceleration
-from planner.sequence.model import Drift, Sequence
+from planner.sequence.model import Sequence
 from planner.sequence.table import ShotTable
 
 SIDEREAL_DAY_S = 86164.0  # rotation of the Earth
@@ -99,19 +99,19 @@ def drifts_of(sequence: Sequence, table: ShotTable) -> Drifts:
     Raises:
         PlanImpossible: drift of the acceleration is declared, and nothing to weigh it by (see acceleration.py).
     """
-    additive = [drift for drift in sequence.drift if drift.kind == "additive"]
-    coupled = [drift for drift in sequence.drift if drift.kind in ("phase", "contrast")]
-    acceleration = [drift for drift in sequence.drift if drift.kind == "acceleration"]
+    declared = {drift.kind for drift in sequence.drift}
     reference = reference_prior(float(table.duration_s.sum()))
     return Drifts(
-        additive=_prior(additive) if additive else reference,
-        coupled=_prior(coupled) if coupled else reference,
-        acceleration=_prior(acceleration),
-        per_acceleration=noise_per_acceleration(table, sequence) if acceleration else None,
+        additive=prior_of(sequence, "additive") if "additive" in declared else reference,
+        coupled=prior_of(sequence, "phase", "contrast") if declared & {"phase", "contrast"} else reference,
+        acceleration=prior_of(sequence, "acceleration"),
+        per_acceleration=noise_per_acceleration(table, sequence) if "acceleration" in declared else None,
     )
 
 
-def _prior(drifts: list[Drift]) -> Prior:
+def prior_of(sequence: Sequence, *kinds: str) -> Prior:
+    """What a sequence declares of these kinds of drift together; none where it declares none."""
+    drifts = [drift for drift in sequence.drift if drift.kind in kinds]
     rate = sum(drift.wander**2 / drift.wander_over_s for drift in drifts)
     periods: dict[float, float] = {}
     for drift in drifts:

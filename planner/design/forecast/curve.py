@@ -19,6 +19,15 @@ from planner.sequence.table import ShotTable
 POINTS = 48  # times at which the errors are given
 DRAWS = 600  # rigs behind the band
 BAND = (0.05, 0.95)
+SINGULAR = 1e-9  # smallest eigenvalue of a scaled information matrix that counts as knowing
+UNITS = {
+    "modulation depth": "relative",
+    "plateau": "contrast",
+    "contrast at the worst hold": "relative",
+    "coherence time": "s",
+    "population lifetime": "s",
+    "signal": "m/s^2",
+}
 ALTERNATIVES = (0.5, 0.7, 0.85, 1.15, 1.4, 2.0)  # of the hold, looked at beside it
 
 
@@ -65,34 +74,76 @@ def progress_of(order: RunningOrder, table: ShotTable, points: int = POINTS) -> 
     return Progress(time_s=time, hold_s=hold, counts=np.cumsum(counts, axis=0), shots=shots)
 
 
-def decay_errors(rig: Knowledge, progress: Progress, widen: float = 0.0) -> dict[str, FloatArray]:
-    """Standard errors (n_time,) of coherence time and population lifetime, s; `widen`: variance that drift adds."""
-    packets = _packets(rig, progress)
-    out = {}
-    for name, start, time_s, information in (
-        ("coherence time", rig.contrast_at(progress.hold_s), rig.coherence_s, packets[0]),
-        ("population lifetime", rig.atoms_at(progress.hold_s), rig.lifetime_s, packets[1]),
-    ):
-        slope = np.stack([start, start * progress.hold_s / time_s], axis=1)
-        each = np.einsum("h,hp,hq->hpq", information, slope, slope)
-        matrix = np.einsum("th,hpq->tpq", progress.counts.astype(np.float64), each)
-        determinant = matrix[:, 0, 0] * matrix[:, 1, 1] - matrix[:, 0, 1] ** 2
-        with np.errstate(divide="ignore", invalid="ignore"):
-            relative = np.sqrt(matrix[:, 0, 0] / determinant * (1 + widen))
-        known = determinant > 1e-9 * matrix[:, 0, 0] * matrix[:, 1, 1]
-        out[name] = np.where(known, relative * time_s, np.inf)
+def known_to(information: FloatArray, slopes: FloatArray, counts: IntArray, wanted: FloatArray) -> FloatArray:
+    """Sum of the variances of the wanted combinations by each time, (n_time,); inf while they cannot be told.
+
+    information (n_hold,): what a packet tells of the curve at each hold; slopes (n_hold, n_parameter): of the curve by
+    its parameters; counts (n_time, n_hold); wanted (n_parameter, n_combination).
+    """
+    each = information[:, None, None] * slopes[:, :, None] * slopes[:, None, :]
+    matrix = np.einsum("th,hpq->tpq", counts.astype(np.float64), each)
+    scale = np.sqrt(np.maximum(np.diagonal(matrix, axis1=1, axis2=2), np.finfo(float).tiny))
+    matrix /= scale[:, :, None] * scale[:, None, :]
+    known = np.linalg.eigvalsh(matrix)[:, 0] > SINGULAR
+    out = np.full(len(counts), np.inf)
+    scaled = wanted[None] / scale[known][:, :, None]
+    out[known] = (scaled * np.linalg.solve(matrix[known], scaled)).sum(axis=(1, 2))
     return out
 
 
-def _packets(rig: Knowledge, progress: Progress) -> tuple[FloatArray, FloatArray]:
+def decay_errors(rig: Knowledge, progress: Progress, widen: float = 0.0) -> dict[str, FloatArray]:
+    """Standard errors (n_time,) of coherence time and population lifetime, s; `widen`: variance that drift adds."""
+    contrast, atoms = _packets(rig, progress)
+    wanted = np.array([[0.0], [1.0]])
+    out = {}
+    for name, start, time_s, information in (
+        ("coherence time", rig.contrast_at(progress.hold_s), rig.coherence_s, contrast),
+        ("population lifetime", rig.atoms_at(progress.hold_s), rig.lifetime_s, atoms),
+    ):
+        slopes = np.stack([start, start * progress.hold_s / time_s], axis=1)
+        out[name] = time_s * np.sqrt(known_to(information, slopes, progress.counts, wanted) * (1 + widen))
+    return out
+
+
+def modulation_error(rig: Knowledge, progress: Progress, period_s: float, widen: float = 0.0) -> FloatArray:
+    """Standard error (n_time,) of the relative depth of a contrast modulation of known period and unknown phase."""
+    hold = progress.hold_s
+    contrast, turn = rig.contrast_at(hold), 2 * np.pi * hold / period_s
+    slopes = contrast[:, None] * np.stack(
+        [np.ones(len(hold)), hold / rig.coherence_s, np.cos(turn), np.sin(turn)], axis=1
+    )
+    information, _ = _packets(rig, progress)
+    return np.asarray(np.sqrt(known_to(information, slopes, progress.counts, np.eye(4)[:, 2:]) / 2 * (1 + widen)))
+
+
+def level_error(rig: Knowledge, progress: Progress, plateau: float, widen: float = 0.0) -> FloatArray:
+    """Standard error (n_time,) of the contrast at which a decay levels off, if it does so at `plateau`."""
+    falling = np.exp(-progress.hold_s / rig.coherence_s)
+    height = rig.contrast - plateau
+    slopes = np.stack([falling, height * falling * progress.hold_s / rig.coherence_s, np.ones(len(falling))], axis=1)
+    information, _ = _packets(rig, progress, plateau + height * falling)
+    return np.asarray(np.sqrt(known_to(information, slopes, progress.counts, np.eye(3)[:, 2:]) * (1 + widen)))
+
+
+def worst_contrast_error(rig: Knowledge, progress: Progress, widen: float = 0.0) -> FloatArray:
+    """Relative standard error (n_time,) of the contrast at the hold where it is largest."""
+    information, _ = _packets(rig, progress)
+    with np.errstate(divide="ignore"):
+        each = np.sqrt((1 + widen) / (progress.counts * information)) / rig.contrast_at(progress.hold_s)
+    return np.asarray(each.max(axis=1))
+
+
+def _packets(rig: Knowledge, progress: Progress, contrast: FloatArray | None = None) -> tuple[FloatArray, FloatArray]:
     """Information of one packet about contrast and about atoms at each hold, for packets of the order's own size."""
-    contrast, atoms = np.empty(len(progress.hold_s)), np.empty(len(progress.hold_s))
+    about_contrast, about_atoms = np.empty(len(progress.hold_s)), np.empty(len(progress.hold_s))
     for size in np.unique(progress.shots):
         mine = progress.shots == size
         one = replace(rig, phases=int(size), states=1)
-        contrast[mine] = one.contrast_information(progress.hold_s[mine])
-        atoms[mine] = one.atom_information(progress.hold_s[mine])
-    return contrast, atoms
+        about_contrast[mine] = one.contrast_information(
+            progress.hold_s[mine], None if contrast is None else contrast[mine]
+        )
+        about_atoms[mine] = one.atom_information(progress.hold_s[mine])
+    return about_contrast, about_atoms
 
 
 def signal_error(
@@ -119,15 +170,27 @@ def forecasts(
     scale: Scale | None,
     information: float,
     widen: Mapping[str, float],
+    goal: str = "",
+    details: Mapping[str, float] | None = None,
     seed: int = 0,
 ) -> list[Forecast]:
-    """All quantities that the night can know: time scales if it has two holds, the signal if `scale` is given.
+    """All quantities that the night can know: what the goal asks for, time scales if it has two holds, the signal if
+    `scale` is given.
 
-    widen: variance that drift adds, by quantity ("signal", "decay").
+    widen: variance that drift adds, by quantity ("signal", "decay"). goal and details: as in `Sequence.goal`.
     """
+    asked, decay = details or {}, widen.get("decay", 0.0)
 
     def errors(one: Knowledge) -> dict[str, FloatArray]:
-        found = decay_errors(one, progress, widen.get("decay", 0.0)) if len(progress.hold_s) > 1 else {}
+        found: dict[str, FloatArray] = {}
+        if goal == "revival" and "period_s" in asked:
+            found["modulation depth"] = modulation_error(one, progress, asked["period_s"], decay)
+        if goal == "plateau" and "plateau" in asked:
+            found["plateau"] = level_error(one, progress, asked["plateau"], decay)
+        if goal == "curve":
+            found["contrast at the worst hold"] = worst_contrast_error(one, progress, decay)
+        if len(progress.hold_s) > 1:
+            found |= decay_errors(one, progress, decay)
         if scale is not None:
             found["signal"] = signal_error(one, scale, progress, information, widen.get("signal", 0.0))
         return found
@@ -140,16 +203,7 @@ def forecasts(
         finite = np.isfinite(band).all(axis=0)
         low, high = np.full(len(error), np.inf), np.full(len(error), np.inf)
         low[finite], high[finite] = np.quantile(band[:, finite], BAND, axis=0)
-        out.append(
-            Forecast(
-                name=name,
-                unit="m/s^2" if name == "signal" else "s",
-                time_s=progress.time_s,
-                error=error,
-                low=low,
-                high=high,
-            )
-        )
+        out.append(Forecast(name=name, unit=UNITS[name], time_s=progress.time_s, error=error, low=low, high=high))
     return out
 
 

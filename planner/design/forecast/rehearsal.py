@@ -2,18 +2,17 @@
 
 A rehearsal draws every shot of the night and estimates the goal quantities from it: contrast of a hold from the mean
 squared contrast of its packets (phases may differ from packet to packet), the coherence time by a weighted fit through
-the holds, the signal from the difference between the two signs of the parity at the fringe's slopes. The same model as
-the forecast's, worked out shot by shot instead of by formula: the one checks the other.
+the holds. The same model as the forecast's, worked out shot by shot instead of by formula: the one checks the other.
+Signals are rehearsed in whole_nights.py, along a running order and with drift.
 """
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
 from planner.arrays import FloatArray, IntArray
 from planner.design.allocation.knowledge import Knowledge
-from planner.design.allocation.signal import Scale
 
 SingleArray = NDArray[np.float32]
 
@@ -74,9 +73,9 @@ def fit_coherence(rig: Knowledge, night: Night, squared: FloatArray) -> FloatArr
     Gauss and Newton from the expected values, weights from the expected variances; a step never changes either number
     by more than a factor of two.
     """
-    expected = rig.contrast_at(night.hold_s)
-    noise = 8 * rig.variance_at(night.hold_s) / night.phases
-    weight = night.packets / (4 * expected**2 * noise + 4 * noise**2)
+    # a squared contrast has the variance 4 C^2 over what a packet tells of C
+    packet = replace(rig, phases=night.phases, states=1)
+    weight = night.packets * packet.contrast_information(night.hold_s) / (4 * rig.contrast_at(night.hold_s) ** 2)
     log_start = np.full(len(squared), 2 * np.log(rig.contrast))
     log_tau = np.full(len(squared), np.log(rig.coherence_s))
     for _ in range(STEPS):
@@ -92,31 +91,6 @@ def fit_coherence(rig: Knowledge, night: Night, squared: FloatArray) -> FloatArr
     return np.asarray(np.exp(log_tau))
 
 
-def rehearse_coherence(rig: Knowledge, night: Night, trials: int, seed: int) -> FloatArray:
+def rehearse_coherence(rng: np.random.Generator, rig: Knowledge, night: Night, trials: int) -> FloatArray:
     """Coherence times that `trials` nights would find, (trials,)."""
-    rng = np.random.default_rng(seed)
     return fit_coherence(rig, night, squared_contrasts(rng, rig, night, trials))
-
-
-def rehearse_signal(
-    rig: Knowledge, scale: Scale, hold_s: float, shots: int, signal: float, trials: int, seed: int
-) -> FloatArray:
-    """Signals (m/s^2) that `trials` nights of `shots` mid-fringe shots at one hold would find, (trials,).
-
-    Shots go evenly over +-90 degrees and the two signs of the parity; the contrast is taken as known.
-    """
-    rng = np.random.default_rng(seed)
-    one = np.array([hold_s])
-    contrast, atoms, kappa = float(rig.contrast_at(one)[0]), float(rig.atoms_at(one)[0]), float(scale.at(one)[0])
-    each = shots // 4
-    total = np.zeros(trials)
-    step = max(1, CHUNK // max(1, shots))
-    for first in range(0, trials, step):
-        count = min(step, trials - first)
-        for theta in (-0.5, 0.5):
-            for sign in (1.0, -1.0):
-                angle = np.full((count, each), np.pi * theta + sign * kappa * signal, dtype=np.float32)
-                y = draw_fractions(rng, angle, contrast, atoms, rig.excess)
-                # dy/ds = -(C/2) sin(theta) sign kappa, the same size in all four groups
-                total[first : first + count] += -np.sin(np.pi * theta) * sign * y.mean(axis=1, dtype=np.float64)
-    return np.asarray(total / (2 * contrast * kappa))
