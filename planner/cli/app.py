@@ -24,6 +24,10 @@ COMMANDS: dict[str, tuple[str, str]] = {
     "timeline": ("planner.cli.timeline", "Draw the timeline of one shot"),
     "rehearse": ("planner.cli.rehearse", "Rehearse a whole night on the stand-in rig"),
     "run": ("planner.cli.run", "Book a night and run it, or go on where one stopped"),
+    "replan": (
+        "planner.cli.replan",
+        "Order the rest of a night anew: after an outage, lost shots, or with fewer hours",
+    ),
     "rig": ("planner.cli.rig", "Start the stand-in rig, or show what a rig says of itself"),
     "nights": ("planner.cli.nights", "List the nights in the logbook"),
     "results": ("planner.cli.results", "Say what a night measured: contrast, coherence time, lifetime"),

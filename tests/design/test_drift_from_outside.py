@@ -81,7 +81,7 @@ def added(name: str, record: np.ndarray) -> tuple[float, float]:
 
 @pytest.mark.parametrize("record", [temperature, rotation])
 def test_ten_nights_of_measured_drift(record) -> None:  # type: ignore[no-untyped-def]
-    """On ten nights of a record never seen, an order lets through a fiftieth at most of what a shuffle does, and no more
+    """On ten nights never seen, an order lets through a fiftieth at most of what a shuffle does, and no more
     than a sweep, which is at its best against drift as slow as this."""
     found = {
         name: np.array([added(name, record(night, orders()[name][0])) for night in range(NIGHTS)]) for name in orders()
