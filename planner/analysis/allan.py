@@ -5,8 +5,8 @@ of frequency data in the literature. All estimates come from cumulative sums, so
 ladder of octaves O(n log n).
 
 The rule for gaps: an average over m slots counts if at least nine in ten of them are filled, and is the mean of those.
-An estimate uses every pair (or triple) of adjoining averages that count. One missing packet then costs no long averaging
-time, and the white noise of an average is at most 1/0.9 of what it would be in variance, 5 % in deviation.
+An estimate uses every pair (or triple) of adjoining averages that count. So one missing packet costs no long
+averaging time, and the white noise of an average is at most 1/0.9 of what it would be in variance, 5 % in deviation.
 
 References:
     W. J. Riley, Handbook of Frequency Stability Analysis, NIST SP 1065 (2008), section 5.2 (formulae from memory; the
@@ -68,8 +68,8 @@ def hadamard(values: FloatArray, factors: IntArray) -> Deviations:
 def modified_allan(values: FloatArray, factors: IntArray) -> Deviations:
     """Modified Allan deviation: differences of adjoining averages, themselves averaged over m shifts.
 
-    It tells white phase noise from flicker phase noise; for white noise of the series it is 1/sqrt(2) of Allan's at long
-    averages. Args, returns and errors as `allan`; n - 3m + 2 terms are possible.
+    For white noise of the series it is 1/sqrt(2) of Allan's at long averages. Args,
+    returns and errors as `allan`; n - 3m + 2 terms are possible.
     """
     series, filled = _checked(values, factors)
     found = []
