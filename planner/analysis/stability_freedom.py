@@ -1,7 +1,7 @@
 """How sure a deviation is: equivalent degrees of freedom by kind of noise, and the kind of noise from the series.
 
-Noise of a series has the spectrum f^alpha: 0 is white, -1 flicker, -2 a random walk; +1 and +2 occur where each value is
-the difference of two readings.
+Noise of a series has the spectrum f^alpha: 0 is white, -1 flicker, -2 a random walk; +1 and +2 occur where each value
+is the difference of two readings.
 
 References:
     C. A. Greenhall and W. J. Riley, "Uncertainty of stability variances based on finite differences", 35th PTTI meeting
@@ -73,7 +73,7 @@ def _summed(t: FloatArray, kind: int, smoothing: int | None) -> FloatArray:
 
 
 def _power_law(t: FloatArray, kind: int) -> FloatArray:
-    """Generalised autocovariance of the twice summed noise: +-|t|^(3 - alpha), times log|t| where that power is even."""
+    """Generalised autocovariance of the twice summed noise: +-|t|^(3 - alpha), times log|t| for even powers."""
     size, power = np.abs(t), 3 - kind
     sign = -1.0 if kind in (2, -1, -2) else 1.0
     return np.asarray(sign * (special.xlogy(size**power, size) if power % 2 == 0 else size**power))

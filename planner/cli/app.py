@@ -26,6 +26,10 @@ COMMANDS: dict[str, tuple[str, str]] = {
     "rig": ("planner.cli.rig", "Start the stand-in rig, or show what a rig says of itself"),
     "nights": ("planner.cli.nights", "List the nights in the logbook"),
     "results": ("planner.cli.results", "Say what a night measured: contrast, coherence time, lifetime"),
+    "stability": (
+        "planner.cli.stability",
+        "Say how steady a night was: noise against averaging time, rhythms, correlations",
+    ),
     "export": ("planner.cli.export", "Write a night as a table for other programs"),
     "record": ("planner.cli.record", "Record results of a rig with no link, from a CSV or typed in"),
 }
