@@ -13,7 +13,8 @@ smoothly is not a discovery.
 References:
     Random signs: Fisher, The Design of Experiments (1935), section 21 (from memory). That the DCT-II holds the
     principal components of a random walk about its mean: its rows are the eigenvectors of the path's Laplacian, Strang,
-    SIAM Rev. 41, 135 (1999) (from memory). False discoveries: Benjamini and Hochberg, J. R. Stat. Soc. B 57, 289 (1995).
+    SIAM Rev. 41, 135 (1999) (from memory). False discoveries: Benjamini and Hochberg, J. R. Stat. Soc. B 57, 289 (1995)
+    (from memory).
 """
 
 from collections.abc import Mapping

@@ -245,19 +245,25 @@ def far_out(values: FloatArray) -> int:
 def plain_words(night: NightStability) -> list[str]:
     """What the figures mean and what they do not, a sentence or two each."""
     found, name, unit = night.stability, night.series.name, night.series.unit
-    best = int(np.argmin(found.allan.value))
+    best = int(np.argmin(found.allan.high))  # where most is sure, not where one lucky difference is smallest
     least = f"{found.allan.value[best]:.3g} {unit}".strip()
-    limit = f" ({found.multiple[best]:.2g} x its shot-noise limit)" if np.isfinite(found.limit[best]) else ""
+    sure = f"at most {found.allan.high[best]:.3g} at {100 * (1 + found.level) / 2:g} %"
+    limit = f", {found.multiple[best]:.2g} x its shot-noise limit" if np.isfinite(found.limit[best]) else ""
     words = []
     if best == len(found) - 1:
         words.append(
-            f"Averaging {name} still helps at {found.tau_s[best]:,.0f} s, the longest time this night can judge: it is "
-            f"steady to {least}{limit} there."
+            f"Averaging {name} helps up to {found.tau_s[best]:,.0f} s at least, the longest time this night can judge: "
+            f"neighbouring averages agree there to {least} ({sure}{limit})."
+        )
+    elif best == 0:
+        words.append(
+            f"Averaging {name} brings nothing that this night can be sure of: neighbouring packets agree to {least} "
+            f"({sure}{limit}), longer averages no better."
         )
     else:
         words.append(
-            f"Averaging {name} helps up to {found.tau_s[best]:,.0f} s, where it is steady to {least}{limit}; longer "
-            "averages gain nothing sure: compare the bands."
+            f"Averaging {name} helps for sure up to {found.tau_s[best]:,.0f} s, where neighbouring averages agree to "
+            f"{least} ({sure}{limit}); this night cannot show that longer averages agree better."
         )
     words.append(
         "This is how far the average of one stretch differs from the next, not an error of the night's result: what "

@@ -20,7 +20,6 @@ MEASURED = ("phase", "contrast", "offset", "atoms", "noise")
 UNITS = {"phase": "rad", "contrast": "", "offset": "", "atoms": "relative", "noise": "x shot noise"}
 LEAST_PER_CELL = 4  # packets that make a cell's mean; with fewer the residual is mostly the mean's own error
 SPARSE = 0.05  # share of packets without a value up to which their slots stay empty
-LONG_WAIT = 4.0  # mean spacings
 LOST_STEP = 2 * np.pi / 3  # a phase step beyond this may as well be one the other way round ...
 LOST_SHARE = 0.01  # ... and with more than this share of such steps a phase is not followed
 
@@ -61,7 +60,7 @@ def packet_clock(start_s: FloatArray, end_s: FloatArray, held: BoolArray) -> Clo
 
     Packets of long holds last longer, and that is no gap: only idle time between packets, beyond the usual, is one. A
     packet without a value leaves its slot empty. Where more than one in twenty has none, that would leave no long
-    average; those packets are then passed over, and only a wait of more than four mean spacings is a pause.
+    average; those packets are then passed over, and the others take a slot each.
 
     Args:
         start_s, end_s: of each packet, (n_packet,), starts ascending. held: whether it has a value, (n_packet,).
@@ -69,11 +68,9 @@ def packet_clock(start_s: FloatArray, end_s: FloatArray, held: BoolArray) -> Clo
     sparse = bool(held.mean() < 1 - SPARSE)
     placed = held if sparse and held.sum() > 1 else np.ones(len(held), dtype=np.bool_)
     cycle = np.diff(start_s[placed])
-    if sparse:
-        extra = np.where(cycle > LONG_WAIT * cycle.mean(), cycle - cycle.mean(), 0)
-    else:
-        idle = np.maximum(start_s[1:] - end_s[:-1], 0)
-        extra = np.maximum(idle - np.median(idle), 0)
+    idle = np.maximum(start_s[1:] - end_s[:-1], 0)
+    lost = np.concatenate([[0.0], np.cumsum(np.maximum(idle - np.median(idle), 0))])
+    extra = np.diff(lost[placed])
     usual = max(float(np.mean(cycle - extra)), 1e-9)
     empty = np.rint(extra / usual).astype(np.int64)
     kept = cycle - np.where(empty > 0, extra, 0)

@@ -69,13 +69,10 @@ def show(found: "NightStability", name: str, console: "Console") -> None:
     from rich.text import Text
 
     unit = f" in {found.series.unit}" if found.series.unit else ""
-    clock = found.clock
-    console.print(
-        Text(
-            f"Night {name}: {found.series.name}{unit}, {np.isfinite(found.series.values).sum():,} packets, one every {_seconds(clock.step_s)} s"
-        ),
-        style="bold",
-    )
+    packets = int(np.isfinite(found.series.values).sum())
+    every = _seconds(found.clock.step_s)
+    head = f"Night {name}: {found.series.name}{unit}, {packets:,} packets, one every {every} s"
+    console.print(Text(head), style="bold")
     console.print(_deviation_table(found))
     console.print()
     console.print(Text(rhythm(found)))
