@@ -22,6 +22,7 @@ from planner.arrays import FloatArray, IntArray
 from planner.errors import NotEnoughData
 
 LEAST_VALUES = LEAST_AVERAGES  # packets below which neither kind of noise nor band means anything
+LEAST_MIRRORED = 8  # averaging factor
 CORRELATED = ("phase", "contrast", "offset", "atoms")
 FALSE_ALARM = 0.01
 DISCOVERY = 0.05  # false discovery rate at which a correlation is called one
@@ -68,6 +69,16 @@ class Stability:
 
 
 @dataclass(frozen=True, kw_only=True)
+class Rhythm:
+    """One sinusoid of a series."""
+
+    period_s: float
+    amplitude: float  # in the unit of the series
+    share: float  # of the scatter
+    chance: float  # that white noise has one as strong at any period
+
+
+@dataclass(frozen=True, kw_only=True)
 class NightStability:
     """What a night says of one series. `notes` are plain words on what it means and what it does not."""
 
@@ -77,15 +88,26 @@ class NightStability:
     used: int
     stability: Stability
     spectrum: Spectrum
-    chance: float  # false-alarm chance of the highest power
     alarm: float  # power that white noise exceeds anywhere in 1 night of 100
     correlations: CorrelationTable | None
     why_no_correlations: str
     notes: tuple[str, ...]
 
     @property
-    def best_period_s(self) -> float:
-        return float(1 / self.spectrum.frequency_hz[self.spectrum.best])
+    def rhythms(self) -> tuple[Rhythm, ...]:
+        """The strongest sinusoids, at most three: those that white noise seldom reaches, or the strongest alone."""
+        found = []
+        for at in self.spectrum.peaks():
+            power = float(self.spectrum.power[at])
+            found.append(
+                Rhythm(
+                    period_s=float(1 / self.spectrum.frequency_hz[at]),
+                    amplitude=float(self.spectrum.amplitude[at]),
+                    share=power,
+                    chance=self.spectrum.false_alarm(power),
+                )
+            )
+        return tuple(rhythm for rhythm in found if rhythm.chance < FALSE_ALARM) or tuple(found[:1])
 
 
 def deviations(
@@ -129,7 +151,11 @@ def deviations(
         pairs = zip(kinds[order], factors.tolist(), strict=True)
         return [degrees_of_freedom(kind, order, m, size, modified=modified) for kind, m in pairs]
 
-    totals = [total_degrees_of_freedom(kind, m, size) for kind, m in zip(kinds[2], factors.tolist(), strict=True)]
+    # the published form for the total variance holds for long averages; short ones hardly touch the mirrored ends
+    totals = [
+        total_degrees_of_freedom(kind, m, size) if m >= LEAST_MIRRORED else plain_freedom
+        for kind, m, plain_freedom in zip(kinds[2], factors.tolist(), free(2), strict=True)
+    ]
     limit = np.full(len(factors), np.nan)
     if shot_sd is not None and np.isfinite(shot_sd[np.isfinite(values)]).all():
         limit = np.sqrt(np.mean(shot_sd[np.isfinite(values)] ** 2) / factors)
@@ -199,7 +225,6 @@ def stability_of(
         used=len(chosen.data),
         stability=found,
         spectrum=spectrum,
-        chance=spectrum.false_alarm(float(spectrum.power[spectrum.best])),
         alarm=spectrum.level(FALSE_ALARM),
         correlations=table,
         why_no_correlations=why_not,
@@ -290,7 +315,7 @@ def plain_words(night: NightStability) -> list[str]:
     outside = far_out(night.series.values)
     if outside:
         words.append(f"{outside} packet(s) lie far out ({FAR_OUT:.0f} robust deviations) and count like all others.")
-    if night.chance < FALSE_ALARM and found.kind[0] < 0:
+    if night.rhythms[0].chance < FALSE_ALARM and min(found.kind) < 0:
         words.append(
             "The false-alarm chance takes white noise. This series wanders, and wandering alone gives high power at "
             "long periods: only a sharp line at a short period is a rhythm."

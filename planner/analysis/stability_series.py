@@ -5,13 +5,15 @@ no instability. So each cell's own mean over the night is taken off, and the res
 A cell's mean follows its own few packets, which makes residuals smaller by sqrt(1 - 1/k) for k packets; that is undone.
 """
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cached_property
 
 import numpy as np
+from scipy import special
 
 from planner.analysis.data import NightData, fractions, shot_variance
 from planner.analysis.fringe import Fringes, fit_fringes, group_sums, phase_half_width
+from planner.analysis.holds import NEVER
 from planner.analysis.results import fringe_groups, measure_noise
 from planner.arrays import BoolArray, FloatArray, IntArray
 from planner.errors import InputError, NotEnoughData
@@ -212,11 +214,17 @@ class NightSeries:
         if name == "noise":
             return self._noise(fringes, packet)
         when = self._time_s[packet]
-        variance, notes = np.full(len(fringes), np.nan), []
+        bad = spoilt(fringes)
+        notes = (
+            [f"{int(bad.sum())} fringes left out whose own shots scatter far beyond the others'"] if bad.any() else []
+        )
+        fringes = replace(fringes, solved=fringes.solved & ~bad)
+        variance = np.full(len(fringes), np.nan)
         if name == "offset":
-            raw, variance = fringes.offset, fringes.covariance[:, 0, 0]
+            raw, variance = np.where(fringes.solved, fringes.offset, np.nan), fringes.covariance[:, 0, 0]
         elif name == "contrast":
-            raw, variance = fringes.contrast_plain, 4 * _along(fringes, across=False)
+            raw = np.where(fringes.solved, fringes.contrast_plain, np.nan)
+            variance = 4 * _along(fringes, across=False)
         else:
             power = fringes.amplitude_squared / (fringes.quadrature_variance * max(noise, 1.0) ** 2)
             stands = fringes.solved & (phase_half_width(np.nan_to_num(power)) < np.pi)
@@ -255,6 +263,20 @@ class NightSeries:
             shot_sd=np.where(known, 1 / np.sqrt(2 * np.maximum(dof, 1)), np.nan),
             notes=("scatter of a packet's shots about their fringe",),
         )
+
+
+def spoilt(fringes: Fringes) -> BoolArray:
+    """Fringes whose residual is beyond what white noise ever does (a laser out of lock for one shot), (n,).
+
+    A residual is independent of the fringe's offset, contrast and phase, so nothing is left out for its value.
+    """
+    judged = fringes.solved & (fringes.dof > 0)
+    if not judged.any():
+        return np.zeros(len(fringes), dtype=np.bool_)
+    dof = np.maximum(fringes.dof, 1).astype(float)
+    usual = float(np.median(fringes.chi_squared[judged] / special.chdtri(dof[judged], 0.5)))
+    limit = special.chdtri(dof, NEVER) * max(usual, 1e-12)
+    return np.asarray(judged & (np.nan_to_num(fringes.chi_squared) > limit))
 
 
 def follow_phase(phase_rad: FloatArray, time_s: FloatArray, cell: IntArray) -> FloatArray:

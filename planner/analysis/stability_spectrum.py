@@ -17,7 +17,7 @@ from planner.arrays import FloatArray
 from planner.errors import InputError, NotEnoughData
 
 LEAST_VALUES = 8
-OVERSAMPLING = 5  # grid points for each independent frequency: a peak between two of them loses less than 2 %
+OVERSAMPLING = 10  # grid points for each independent frequency: a peak between two of them loses less than 1 %
 SPREAD = 12  # grid points that one time spreads over; with a grid twice too fine its error is below 1e-8
 PADDING = 2
 
@@ -36,6 +36,18 @@ class Spectrum:
     def best(self) -> int:
         """Index of the highest power."""
         return int(np.argmax(self.power))
+
+    def peaks(self, most: int = 3) -> list[int]:
+        """Indices of the highest maxima, highest first; none within one independent frequency of a higher one."""
+        inner = np.concatenate([[-1.0], self.power, [-1.0]])
+        tops = np.flatnonzero((inner[1:-1] >= inner[:-2]) & (inner[1:-1] > inner[2:]))
+        found: list[int] = []
+        for top in tops[np.argsort(-self.power[tops], kind="stable")].tolist():
+            if all(abs(top - other) >= OVERSAMPLING for other in found):
+                found.append(top)
+            if len(found) == most:
+                break
+        return found
 
     def false_alarm(self, power: float) -> float:
         """Chance that white noise alone has a power this high anywhere in the spectrum (Baluev's upper bound).

@@ -75,7 +75,8 @@ def show(found: "NightStability", name: str, console: "Console") -> None:
     console.print(Text(head), style="bold")
     console.print(_deviation_table(found))
     console.print()
-    console.print(Text(rhythm(found)))
+    for line in rhythm_lines(found):
+        console.print(Text(line))
     console.print()
     if found.correlations is None:
         console.print(Text(f"No correlations: {found.why_no_correlations}."))
@@ -91,16 +92,15 @@ def show(found: "NightStability", name: str, console: "Console") -> None:
         console.print(Text(f"- {note}"))
 
 
-def rhythm(found: "NightStability") -> str:
-    """The strongest sinusoid in one line."""
-    spectrum, at = found.spectrum, found.spectrum.best
-    amplitude = f"{spectrum.amplitude[at]:.3g} {found.series.unit}".strip()
-    chance = "below 1e-6" if found.chance < 1e-6 else f"{found.chance:.2g}"
-    return (
-        f"strongest rhythm  {_seconds(found.best_period_s)} s, amplitude {amplitude}, "
-        f"{100 * spectrum.power[at]:.0f} % of the scatter\n"
-        f"                  as strong in white noise, anywhere: {chance} of nights"
-    )
+def rhythm_lines(found: "NightStability") -> list[str]:
+    """The strongest sinusoids, a line each."""
+    lines: list[str] = []
+    for own in found.rhythms:
+        amplitude = f"{own.amplitude:.3g} {found.series.unit}".strip()
+        chance = "below 1e-6" if own.chance < 1e-6 else f"{own.chance:.2g}"
+        share = f"{100 * own.share:.0f} % of the scatter, by chance {chance}"
+        lines.append(f"rhythm {_seconds(own.period_s):>7} s, {amplitude}, {share}")
+    return lines
 
 
 def _seconds(value: float) -> str:
@@ -154,8 +154,7 @@ def document(found: "NightStability") -> dict[str, Any]:
     """The figures as one JSON object: seconds and the series' own unit, null where there is no number."""
     import numpy as np
 
-    own, spectrum, table = found.stability, found.spectrum, found.correlations
-    at = spectrum.best
+    own, table = found.stability, found.correlations
     return {
         "attempts": found.attempts,
         "used": found.used,
@@ -185,13 +184,11 @@ def document(found: "NightStability") -> dict[str, Any]:
             }
             for index in range(len(own))
         ],
-        "rhythm": {
-            "period_s": found.best_period_s,
-            "amplitude": _number(spectrum.amplitude[at]),
-            "share": _number(spectrum.power[at]),
-            "false_alarm": _number(found.chance),
-            "share_at_false_alarm_0.01": _number(found.alarm),
-        },
+        "rhythms": [
+            {"period_s": own.period_s, "amplitude": own.amplitude, "share": own.share, "false_alarm": own.chance}
+            for own in found.rhythms
+        ],
+        "share_at_false_alarm_0.01": _number(found.alarm),
         "correlations": []
         if table is None
         else [

@@ -70,8 +70,8 @@ def _deviations(axes: "Axes", night: "NightStability") -> None:
         )
     if np.isfinite(found.limit).all():
         multiple = found.multiple
-        at = f"; Allan is {multiple[0]:.2g} x at one packet, {multiple[-1]:.2g} x at the end"
-        axes.plot(found.tau_s, found.limit, color=GREY, linestyle=(0, (4, 3)), label=f"shot-noise limit{at}")
+        words = rf"shot-noise limit, as $1/\sqrt{{\tau}}$: Allan is {multiple[0]:.2g} to {multiple[-1]:.2g} x"
+        axes.plot(found.tau_s, found.limit, color=GREY, linestyle=(0, (4, 3)), label=words)
     else:
         white = found.allan.value[0] / np.sqrt(found.factor)
         axes.plot(found.tau_s, white, color=GREY, linestyle=(0, (4, 3)), label=r"white noise: falls as $1/\sqrt{\tau}$")
@@ -81,12 +81,14 @@ def _deviations(axes: "Axes", night: "NightStability") -> None:
     values = np.concatenate([found.allan.value, found.hadamard.value, found.limit, found.allan.low])
     values = values[np.isfinite(values) & (values > 0)]
     highest = np.nanmax(np.concatenate([found.allan.value, found.hadamard.value, found.allan.high[:3]]))
-    axes.set_ylim(values.min() / 1.5, highest * 3)
+    lowest = float(values.min())
+    room = (3 * highest / lowest) ** 0.13  # for the legend's one line below the curves
+    axes.set_ylim(lowest / (1.2 * room), highest * 3)
     _plain_ticks(axes)
     axes.set_title("Difference of neighbouring averages; bars are 95 % bands")
     axes.set_xlabel("averaging time (s)")
     axes.set_ylabel(_label(night, "deviation"))
-    axes.legend(loc="lower left", fontsize=8.5)
+    axes.legend(loc="lower left", fontsize=8.5, ncols=3)
 
 
 def _rhythms(axes: "Axes", night: "NightStability") -> None:
