@@ -131,7 +131,7 @@ def deviations(
     held = int(np.isfinite(values).sum())
     if held < LEAST_VALUES:
         raise NotEnoughData(f"{held} packets have a value: a stability needs {LEAST_VALUES} at least")
-    if np.nanmax(values) - np.nanmin(values) <= 1e-12 * np.nanmax(np.abs(values)):
+    if not np.isinf(values).any() and np.nanmax(values) - np.nanmin(values) <= 1e-12 * np.nanmax(np.abs(values)):
         raise NotEnoughData("every packet has the same value: a constant series has no stability to measure")
     factors = allan.octaves(len(values))
     plain = allan.allan(values, factors)

@@ -1,8 +1,8 @@
 """A night as series in time: one value per packet of phase, contrast, offset, atoms, noise and every reading.
 
 Phase, contrast, offset and atoms differ from cell to cell by design (hold, swept settings, switch states), and that is
-no instability. So each cell's own mean over the night is taken off, and the residuals of all cells make one series.
-A cell's mean follows its own few packets, which makes residuals smaller by sqrt(1 - 1/k) for k packets; that is undone.
+no instability. So each cell's own level is taken off, told apart from the drift of the night, and the residuals of all
+cells make one series.
 """
 
 from dataclasses import dataclass, replace
@@ -15,12 +15,12 @@ from planner.analysis.data import NightData, fractions, shot_variance
 from planner.analysis.fringe import Fringes, fit_fringes, group_sums, phase_half_width
 from planner.analysis.holds import NEVER
 from planner.analysis.results import fringe_groups, measure_noise
+from planner.analysis.stability_cells import LEAST_PER_CELL, cell_levels, cell_residuals
 from planner.arrays import BoolArray, FloatArray, IntArray
 from planner.errors import InputError, NotEnoughData
 
 MEASURED = ("phase", "contrast", "offset", "atoms", "noise")
 UNITS = {"phase": "rad", "contrast": "", "offset": "", "atoms": "relative", "noise": "x shot noise"}
-LEAST_PER_CELL = 4  # packets that make a cell's mean; with fewer the residual is mostly the mean's own error
 SPARSE = 0.05  # share of packets without a value up to which their slots stay empty
 LOST_STEP = 2 * np.pi / 3  # a phase step beyond this may as well be one the other way round ...
 LOST_SHARE = 0.01  # ... and with more than this share of such steps a phase is not followed
@@ -145,10 +145,9 @@ class NightSeries:
         return Series(name=reading, unit="", values=values, shot_sd=np.full(self._count, np.nan), notes=())
 
     def reading_residual(self, name: str) -> FloatArray:
-        """A reading about its cells' means, (n_packet,), as the measured series are; NaN where it has none."""
+        """A reading about its cells' levels, (n_packet,), as the measured series are; NaN where it has none."""
         values = self._means(self._data.readings[name])
-        level, usable = _cell_means(values, self.cells)
-        return np.asarray(np.where(usable, values - level, np.nan))
+        return cell_residuals(values, self.cells)[0]
 
     @cached_property
     def cells(self) -> IntArray:
@@ -169,14 +168,13 @@ class NightSeries:
         total = self._data.atoms
         mean = self._means(total)
         shots = np.bincount(self._packet, minlength=self._count)
-        level, usable = _cell_means(mean, self.cells)
-        relative = np.where(usable, (mean / level - 1) * _undo_mean(self.cells, usable), np.nan)
+        residual, usable = cell_residuals(np.log(mean), self.cells)
         return Series(
             name="atoms",
             unit=UNITS["atoms"],
-            values=relative,
+            values=residual,
             shot_sd=1 / np.sqrt(np.maximum(mean * shots, 1)),
-            notes=_cell_notes(self.cells, usable, "relative to each cell's own mean"),
+            notes=_cell_notes(self.cells, usable, "logarithm, each cell's own level taken off"),
         )
 
     @cached_property
@@ -235,8 +233,9 @@ class NightSeries:
             if (fringes.solved & ~stands).any():
                 notes.append(f"{int((fringes.solved & ~stands).sum())} fringes do not stand out and have no phase")
             raw = follow_phase(raw, when, cell)
-        level, usable = _cell_means(raw, cell)
-        residual = np.where(usable, (raw - level) * _undo_mean(cell, usable), np.nan)
+        order = np.argsort(when, kind="stable")
+        residual, usable = np.empty(len(raw)), np.empty(len(raw), dtype=np.bool_)
+        residual[order], usable[order] = cell_residuals(raw[order], cell[order])
         weight = np.where(usable & np.isfinite(variance) & (variance > 0), 1 / variance, 0.0)
         held = group_sums(packet, weight, self._count)
         if not (held > 0).any():
@@ -247,7 +246,7 @@ class NightSeries:
             unit=UNITS[name],
             values=np.where(held > 0, values, np.nan),
             shot_sd=np.where(held > 0, 1 / np.sqrt(np.maximum(held, 1e-300)), np.nan),
-            notes=(*_cell_notes(cell, usable, "each cell's own mean taken off"), *notes),
+            notes=(*_cell_notes(cell, usable, "each cell's own level taken off"), *notes),
         )
 
     def _noise(self, fringes: Fringes, packet: IntArray) -> Series:
@@ -301,7 +300,8 @@ def follow_phase(phase_rad: FloatArray, time_s: FloatArray, cell: IntArray) -> F
         step = np.abs(np.diff(path))
         own = np.zeros(len(good))
         own[order] = path
-        shift = _cell_means(own, cell[good], least=1)[0]
+        label = np.unique(cell[good], return_inverse=True)[1].ravel()
+        shift = cell_levels(path, label[order])[label]
         moved = np.angle(np.exp(1j * (phase_rad[good] - direction - (shift - np.mean(own)))))
         if np.allclose(np.exp(1j * moved), np.exp(1j * about), atol=1e-6):
             break
@@ -329,20 +329,6 @@ def _along(fringes: Fringes, *, across: bool) -> FloatArray:
         c, s = -s, c
     own = fringes.covariance
     return np.asarray(c**2 * own[:, 1, 1] + 2 * c * s * own[:, 1, 2] + s**2 * own[:, 2, 2])
-
-
-def _cell_means(values: FloatArray, cell: IntArray, *, least: int = LEAST_PER_CELL) -> tuple[FloatArray, BoolArray]:
-    """Mean of each value's own cell, and which values are finite in a cell of at least `least` of them; (n,) each."""
-    good = np.isfinite(values)
-    count = int(cell.max()) + 1
-    held = np.bincount(cell[good], minlength=count)
-    mean = group_sums(cell[good], values[good], count) / np.maximum(held, 1)
-    return mean[cell], good & (held[cell] >= least)
-
-
-def _undo_mean(cell: IntArray, usable: BoolArray) -> FloatArray:
-    held = np.bincount(cell[usable], minlength=int(cell.max()) + 1)[cell]
-    return np.asarray(np.sqrt(held / np.maximum(held - 1, 1)))
 
 
 def _cell_notes(cell: IntArray, usable: BoolArray, done: str) -> tuple[str, ...]:

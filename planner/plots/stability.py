@@ -4,6 +4,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from planner.analysis.stability_series import UNITS
 from planner.plots.style import BLUE, GREY, SETTINGS, VERMILION
 
 if TYPE_CHECKING:
@@ -43,7 +44,8 @@ def _label(night: "NightStability", text: str = "") -> str:
 def _series(axes: "Axes", night: "NightStability") -> None:
     hours = night.clock.time_s / 3600
     axes.plot(hours, night.series.values, ".", color=BLUE, markersize=3.5)
-    axes.set_title(f"{night.series.name.capitalize()} of each packet")
+    name = night.series.name
+    axes.set_title(f"{name.capitalize() if name in UNITS else name} of each packet")
     axes.set_xlabel("time from the night's start (h)")
     axes.set_ylabel(_label(night))
     axes.margins(x=0.01)
@@ -68,17 +70,18 @@ def _deviations(axes: "Axes", night: "NightStability") -> None:
             linewidth=1,
             label=name,
         )
-    if np.isfinite(found.limit).all():
+    reference = found.limit
+    if np.isfinite(reference).all():
         multiple = found.multiple
         words = rf"shot-noise limit, as $1/\sqrt{{\tau}}$: Allan is {multiple[0]:.2g} to {multiple[-1]:.2g} x"
-        axes.plot(found.tau_s, found.limit, color=GREY, linestyle=(0, (4, 3)), label=words)
     else:
-        white = found.allan.value[0] / np.sqrt(found.factor)
-        axes.plot(found.tau_s, white, color=GREY, linestyle=(0, (4, 3)), label=r"white noise: falls as $1/\sqrt{\tau}$")
+        reference = found.allan.value[0] / np.sqrt(found.factor)
+        words = r"white noise falls as $1/\sqrt{\tau}$"
+    axes.plot(found.tau_s, reference, color=GREY, linestyle=(0, (4, 3)), label=words)
     axes.set_xscale("log")
     axes.set_yscale("log")
     # an open band at the last times would squeeze all the rest
-    values = np.concatenate([found.allan.value, found.hadamard.value, found.limit, found.allan.low])
+    values = np.concatenate([found.allan.value, found.hadamard.value, reference, found.allan.low])
     values = values[np.isfinite(values) & (values > 0)]
     highest = np.nanmax(np.concatenate([found.allan.value, found.hadamard.value, found.allan.high[:3]]))
     lowest = float(values.min())
@@ -96,21 +99,11 @@ def _rhythms(axes: "Axes", night: "NightStability") -> None:
     minutes = 1 / spectrum.frequency_hz / 60
     axes.plot(minutes, spectrum.power, color=BLUE, linewidth=0.9)
     axes.axhline(night.alarm, color=VERMILION, linewidth=1, linestyle=(0, (4, 3)))
-    axes.annotate(
-        "white noise: 1 night in 100 has more, anywhere",
-        (1, night.alarm),
-        xycoords=("axes fraction", "data"),
-        xytext=(-2, 3),
-        textcoords="offset points",
-        ha="right",
-        color=VERMILION,
-        fontsize=8.5,
-    )
     axes.set_xscale("log")
     axes.set_xlim(minutes.min(), minutes.max())
     axes.set_ylim(0, max(1.25 * night.alarm, 1.1 * float(spectrum.power.max())))
     _plain_ticks(axes, y=False)
-    axes.set_title("Rhythms: share of the scatter that one sinusoid explains")
+    axes.set_title("Rhythms: share that one sinusoid explains; white noise passes the dashes in 1 night of 100")
     axes.set_xlabel("period (min)")
     axes.set_ylabel("share")
 
