@@ -22,6 +22,8 @@ from planner.errors import InputError, NotEnoughData
 MEASURED = ("phase", "contrast", "offset", "atoms", "noise")
 UNITS = {"phase": "rad", "contrast": "", "offset": "", "atoms": "relative", "noise": "x shot noise"}
 SPARSE = 0.05  # share of packets without a value up to which their slots stay empty
+PASSES = 20
+SETTLED = 1e-4  # rad
 LOST_STEP = 2 * np.pi / 3  # a phase step beyond this may as well be one the other way round ...
 LOST_SHARE = 0.01  # ... and with more than this share of such steps a phase is not followed
 
@@ -169,6 +171,7 @@ class NightSeries:
         mean = self._means(total)
         shots = np.bincount(self._packet, minlength=self._count)
         residual, usable = cell_residuals(np.log(mean), self.cells)
+        _need_cells(usable, "atoms")
         return Series(
             name="atoms",
             unit=UNITS["atoms"],
@@ -236,10 +239,9 @@ class NightSeries:
         order = np.argsort(when, kind="stable")
         residual, usable = np.empty(len(raw)), np.empty(len(raw), dtype=np.bool_)
         residual[order], usable[order] = cell_residuals(raw[order], cell[order])
+        _need_cells(usable, name)
         weight = np.where(usable & np.isfinite(variance) & (variance > 0), 1 / variance, 0.0)
         held = group_sums(packet, weight, self._count)
-        if not (held > 0).any():
-            raise NotEnoughData(f"no cell has {LEAST_PER_CELL} packets with a value: there is no {name} residual")
         values = group_sums(packet, weight * np.nan_to_num(residual), self._count) / np.maximum(held, 1e-300)
         return Series(
             name=name,
@@ -295,24 +297,23 @@ def follow_phase(phase_rad: FloatArray, time_s: FloatArray, cell: IntArray) -> F
         found[good] = about
         return found
     order = np.argsort(time_s[good], kind="stable")
-    for _ in range(20):  # cells' directions and the common path in turn, until they agree
+    label = np.unique(cell[good], return_inverse=True)[1].ravel()
+    for _ in range(PASSES):  # cells' directions and the common path in turn, until they agree
         path = np.unwrap(about[order])
         step = np.abs(np.diff(path))
-        own = np.zeros(len(good))
-        own[order] = path
-        label = np.unique(cell[good], return_inverse=True)[1].ravel()
         shift = cell_levels(path, label[order])[label]
-        moved = np.angle(np.exp(1j * (phase_rad[good] - direction - (shift - np.mean(own)))))
-        if np.allclose(np.exp(1j * moved), np.exp(1j * about), atol=1e-6):
+        shift -= shift.mean()
+        if np.abs(shift).max() < SETTLED:
             break
-        direction, about = direction + shift - np.mean(own), moved
+        direction = direction + shift
+        about = np.angle(np.exp(1j * (phase_rad[good] - direction)))
     if np.mean(step > LOST_STEP) > LOST_SHARE:
         raise NotEnoughData(
             f"{int((step > LOST_STEP).sum())} of {len(step)} steps of the phase from packet to packet are longer than "
             "a third of a turn: it cannot be told which way it went, so there is no phase series. Shorter holds, or "
             "packets closer in time, can be followed"
         )
-    found[good] = own
+    found[good[order]] = path
     return found
 
 
@@ -329,6 +330,14 @@ def _along(fringes: Fringes, *, across: bool) -> FloatArray:
         c, s = -s, c
     own = fringes.covariance
     return np.asarray(c**2 * own[:, 1, 1] + 2 * c * s * own[:, 1, 2] + s**2 * own[:, 2, 2])
+
+
+def _need_cells(usable: BoolArray, name: str) -> None:
+    if not usable.any():
+        raise NotEnoughData(
+            f"no cell has {LEAST_PER_CELL} packets with a value: nothing repeats, so {name} that differs by design "
+            "cannot be told from drift"
+        )
 
 
 def _cell_notes(cell: IntArray, usable: BoolArray, done: str) -> tuple[str, ...]:

@@ -7,6 +7,7 @@ import pytest
 
 from planner.analysis.data import NightData, choose
 from planner.analysis.stability import deviations, far_out, stability_of
+from planner.analysis.stability_cells import cell_levels, cell_residuals
 from planner.analysis.stability_series import NightSeries, follow_phase, packet_clock
 from planner.errors import InputError, NotEnoughData
 from tests.analysis.nights import night
@@ -187,3 +188,43 @@ def test_three_shots_a_packet_have_no_noise_series() -> None:
     """Exactly three shots leave no scatter about a fringe."""
     with pytest.raises(NotEnoughData, match="no scatter"):
         of(columns(15, phases=3), "noise")
+
+
+def test_cell_levels_are_told_apart_from_drift() -> None:
+    """Twelve cells at random in a walk ten times the noise: levels come back three times closer than plain means.
+
+    The noise of neighbours' differences is then what was put in: no jumps from misjudged levels.
+    """
+    rng = np.random.default_rng(16)
+    errors = np.zeros(2)
+    for _ in range(20):
+        cell = rng.permutation(np.repeat(np.arange(12), 17))
+        true = rng.standard_normal(12)
+        values = true[cell] + 0.1 * rng.standard_normal(204) + np.cumsum(0.1 * rng.standard_normal(204))
+        means = np.bincount(cell, values) / 17
+        for at, levels in enumerate((cell_levels(values, cell), means)):
+            errors[at] += np.var(levels - true)
+    assert errors[0] < errors[1] / 9
+
+
+def test_cell_levels_of_white_noise_are_means() -> None:
+    """With no drift levels are the cells' means within a tenth of their own error, and residuals keep their size."""
+    rng = np.random.default_rng(17)
+    cell = rng.permutation(np.repeat(np.arange(10), 30))
+    sizes = []
+    for _ in range(30):
+        values = rng.standard_normal(300)
+        residual, usable = cell_residuals(values, cell)
+        assert usable.all()
+        sizes.append(np.mean(residual**2))
+    assert abs(np.mean(sizes) - 1) < 4 * np.std(sizes) / np.sqrt(30) + 0.01
+    levels = cell_levels(values, cell)
+    means = np.bincount(cell, values) / 30
+    assert np.std(levels - means) < 0.1 / np.sqrt(30)
+
+
+def test_cells_with_few_packets_have_no_residual() -> None:
+    """Fewer than four packets make no level."""
+    residual, usable = cell_residuals(np.arange(10.0), np.array([0] * 7 + [1] * 3))
+    assert usable.tolist() == [True] * 7 + [False] * 3
+    assert np.isnan(residual[7:]).all()

@@ -46,18 +46,20 @@ def coverage(alpha: int, order: int, series: int, values: int, *, lost: float = 
     """Share of series whose band holds the true deviation, at each averaging time; the kind of noise is not told.
 
     Args:
-        lost: share of values that are missing at random.
+        lost: share of values that are missing at random; a series then has a time only if some average of it counts.
     """
     rng = np.random.default_rng([alpha + 10, order, values])
-    inside = []
+    inside: dict[int, list[bool]] = {}
     for _ in range(series):
         own = power_law(rng, values, alpha)
         own[rng.random(values) < lost] = np.nan
         found = deviations(own, 1.0)
         curve = found.allan if order == 2 else found.hadamard
-        true = np.array([truth(alpha, m, order) for m in found.factor.tolist()])
-        inside.append((curve.low <= true) & (true <= curve.high))
-    return np.asarray(np.mean(inside, axis=0))
+        for m, low, high in zip(found.factor.tolist(), curve.low, curve.high, strict=True):
+            if np.isfinite(low):
+                inside.setdefault(m, []).append(bool(low <= truth(alpha, m, order) <= high))
+    # a time that only few series have says nothing of coverage
+    return np.array([np.mean(own) for own in inside.values() if len(own) > series / 2])
 
 
 def independent(rng: np.random.Generator, kind: str, size: int) -> np.ndarray:
