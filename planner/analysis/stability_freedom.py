@@ -19,6 +19,7 @@ from planner.arrays import FloatArray
 from planner.errors import InputError
 
 KINDS = {2: "white phase", 1: "flicker phase", 0: "white", -1: "flicker", -2: "walk", -3: "flicker walk", -4: "run"}
+SHORT = 8  # factors beyond which samples and means of a walk have the same freedom to 1 %
 LEAST_AVERAGES = 30  # below this the lag-1 autocorrelation does not tell the kinds apart (SP 1065, section 5.5.6)
 
 
@@ -29,7 +30,8 @@ def degrees_of_freedom(
 
     The whole sum of Greenhall and Riley is taken, without their tables for large arguments. Values are exact means over
     their slots, so for alpha <= 0 the summed series is not smoothed any further (their filter factor goes to infinity);
-    that is exact for white noise.
+    that is exact for white noise. Values may also be samples of a walk, which have less freedom over one or two slots:
+    the smaller of the two is taken.
 
     Args:
         kind: alpha, -4 to 2. order: 2 for Allan's, 3 for Hadamard's variance. factor: m. values: of the series, n.
@@ -53,6 +55,20 @@ def degrees_of_freedom(
     rough = kind <= 0 and not (modified and factor > 1)
     covariance = _difference_covariance(lags / stride, kind, order, None if rough else smoothing)
     weight = np.where((lags == 0) | (lags == last), 1.0, 2.0) * (1 - lags / terms)
+    freedom = float(terms * covariance[0] ** 2 / np.sum(weight * covariance**2))
+    if kind in (-2, -4) and factor <= SHORT and overlapping and not modified:
+        freedom = min(freedom, _sampled_freedom(kind, order, factor, terms))
+    return freedom
+
+
+def _sampled_freedom(kind: int, order: int, factor: int, terms: int) -> float:
+    """The same for a sampled walk (alpha -2) or summed walk (-4): exact, from the covariance of a moving average."""
+    response = np.repeat([-1.0, 1.0] if order == 2 else [1.0, -2.0, 1.0], factor)
+    for _ in range(-kind // 2):
+        response = np.cumsum(response)
+    covariance = np.correlate(response, response, "full")[len(response) - 1 :][:terms]
+    lags = np.arange(len(covariance))
+    weight = np.where(lags == 0, 1.0, 2.0) * (1 - lags / terms)
     return float(terms * covariance[0] ** 2 / np.sum(weight * covariance**2))
 
 

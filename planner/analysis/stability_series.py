@@ -99,10 +99,15 @@ class NightSeries:
         data: shots that count (`choose`), in any order.
 
     Raises:
-        NotEnoughData: fewer than two packets.
+        NotEnoughData: fewer than two packets, or shots without a start time.
     """
 
     def __init__(self, data: NightData) -> None:
+        timed = int(np.isfinite(data.start_s).sum())
+        if timed < len(data):
+            raise NotEnoughData(
+                f"{len(data) - timed} of {len(data)} shots have no start time on record: a series needs all of them"
+            )
         order = np.argsort(data.start_s, kind="stable")
         self._data = data.rows(order)
         self._packet = _packets(self._data)

@@ -154,6 +154,10 @@ def test_no_number_for_bad_input() -> None:
     one = columns() | {"packet": np.zeros(1600, dtype=int)}
     with pytest.raises(NotEnoughData, match="1 packet"):
         of(one, "atoms")
+    untimed = columns()
+    untimed["start_s"][5] = np.nan
+    with pytest.raises(NotEnoughData, match="1 of 1600 shots have no start time"):
+        of(untimed, "atoms")
     unlogged = columns() | {"reading_tilt": np.full(1600, np.nan)}
     with pytest.raises(NotEnoughData, match="no shot that counts"):
         of(unlogged, "tilt")

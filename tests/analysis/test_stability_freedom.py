@@ -50,6 +50,11 @@ def test_white_noise_is_exact(order: int, m: int) -> None:
     np.testing.assert_allclose(degrees_of_freedom(0, order, m, 300), exact, rtol=1e-9)
 
 
+def test_sampled_walk_over_one_slot() -> None:
+    """Hadamard's terms of a sampled walk over one slot are first differences of white noise: n / (1 + 1/2) nearly."""
+    np.testing.assert_allclose(degrees_of_freedom(-2, 3, 1, 1000), 998 / (1 + 0.5 * (1 - 1 / 998)), rtol=1e-9)
+
+
 @pytest.mark.parametrize("order", [2, 3])
 @pytest.mark.parametrize(("kind", "rtol"), [(2, 1e-3), (1, 3e-2), (-1, 2e-3), (-2, 1e-2)])
 def test_against_the_reference_package(order: int, kind: int, rtol: float) -> None:
