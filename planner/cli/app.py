@@ -36,6 +36,10 @@ COMMANDS: dict[str, tuple[str, str]] = {
         "Look at a night's fringes: which stand out, their phase, their noise, the detector",
     ),
     "decay": ("planner.cli.decay", "Fit how contrast and atom number fall with hold: every shape, compared"),
+    "stability": (
+        "planner.cli.stability",
+        "Say how steady a night was: noise against averaging time, rhythms, correlations",
+    ),
     "export": ("planner.cli.export", "Write a night as a table for other programs"),
     "record": ("planner.cli.record", "Record results of a rig with no link, from a CSV or typed in"),
 }

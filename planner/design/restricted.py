@@ -48,6 +48,7 @@ LEADING = 4  # features that are looked at first
 HOT = 64  # frequencies with the highest mean power, looked at first
 SIGNS_AT_ONCE = 20_000_000  # numbers: 160 MB of signs of a whole night
 MOST_TRIES = 4000  # batches before a draw gives up
+QUIET, QUIET_SHARE = 3, 20  # batches in a row that add less than a twentieth to a list end it
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -259,13 +260,17 @@ class RestrictedSet:
             return _Fresh(part, self.bars, self._hot, rng)
         wanted = max(LISTED, 2 ** (-(-LISTED_LOG2 // len(self._parts)) - 1))
         kept: dict[bytes, tuple[FloatArray, SingleArray]] = {}
+        quiet = 0
         for _ in range(MOST_TRIES):
+            before = len(kept)
             signs = _flips_under(part, self.bars, max(SAMPLE, wanted), rng)
             power = part.periods(signs)
             for row in np.flatnonzero(self._peaks(power + others) <= self.bars.peak_of_part):
                 signs[row] *= signs[row, 0]  # a flip and its opposite are one entry
                 kept[signs[row].astype(np.int8).tobytes()] = (signs[row], power[row])
-            if len(kept) >= wanted:
+            # a part of some 13 to 20 units may have no more flips than are wanted: stop when hardly any new one turns up
+            quiet = quiet + 1 if len(kept) <= before + before // QUIET_SHARE else 0
+            if len(kept) >= wanted or (kept and quiet == QUIET):
                 break
         chosen = list(kept.values())[:wanted]
         return _Listed(part, np.array([row for row, _ in chosen]), np.array([row for _, row in chosen]), self._hot)

@@ -115,3 +115,12 @@ def test_without_a_wanted_parity_nothing_is_drawn() -> None:
     assert (order.unit == -1).all()
     with pytest.raises(NotEnoughData, match=r"goal\.wanted"):
         redraw(order, table, sequence, n=10, rng=np.random.default_rng(1))
+
+
+@pytest.mark.parametrize("repeats", [13, 17])
+def test_parts_with_few_flips_to_list(repeats: int) -> None:
+    """A point of 13 or 17 packets has fewer good flips than are listed for larger ones: the draw is made all the same,
+    from a set that is large."""
+    table, sequence = night_a(repeats)
+    order = make_order(table, sequence, seed=1, effort="quick")
+    assert order.notes["log2_members"] > 17
