@@ -134,6 +134,8 @@ def toml(data: Table, path: str = "") -> str:
 def _value(value: Any) -> str:
     if isinstance(value, list):
         return "[" + ", ".join(_value(one) for one in value) + "]"
+    if isinstance(value, np.floating):
+        value = float(value)
     if isinstance(value, bool):
         return "true" if value else "false"
     return f'"{value}"' if isinstance(value, str) else repr(value)

@@ -14,8 +14,8 @@ from planner.arrays import FloatArray
 from planner.link.stand_in.model import StandInModel, Truth
 from tests.link.stand_in_profiles import model, play, share
 
-# h: exact, SI brochure 9th edition; u in kg: CODATA 2022, from memory. Rb-87 in u: AME2020, Wang et al., Chin. Phys. C 45,
-# 030003 (2021), from memory
+# h: exact, SI brochure 9th edition; u in kg: CODATA 2022, from memory. Rb-87 in u: AME2020, Wang et al., Chin. Phys. C
+# 45, 030003 (2021), from memory
 PLANCK, HBAR = 6.62607015e-34, 6.62607015e-34 / (2 * np.pi)
 MASS = 86.909180529 * 1.66053906892e-27
 LATTICE = 866e-9  # of the profile
@@ -164,7 +164,7 @@ def best(values: FloatArray) -> int:
 def test_every_knob_has_its_best_inside(knob: str, grid: FloatArray) -> None:
     """What a night gains is C sqrt(N) x separation x hold: from the best of each knob it gets worse both ways."""
     rig = model({"loss.spill": "0.4 1/s", "loss.per_depth": "0.0006 1/s"})
-    at = {"hold": 10.0, "separation": 4e-6, knob: grid}
+    at: dict[str, float | FloatArray] = {"hold": 10.0, "separation": 4e-6, knob: grid}
     found = truth(rig, **at)
     gain = found.contrast * np.sqrt(found.atoms) * np.asarray(at["separation"]) * np.asarray(at["hold"])
     best(gain)

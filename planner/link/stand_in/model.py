@@ -83,6 +83,8 @@ class StandInModel:
         self._seed = seed
         self._mass = atom(profile.atom).mass_kg
         self._number = profile.numbers
+        walking = [self._number[f"drift.{name}"] for name in DRIFTING] + [one.walk for one in profile.readings.values()]
+        self._drifts = any(walking)  # the walks are most of a shot's work; a rig that does not drift goes without
         self._walks = Walks(seed, len(DRIFTING) + len(profile.readings))
         self._unlocks = Unlocks(seed, self._number["faults.unlocks_per_hour"], self._number["faults.unlock_lasts"])
 
@@ -141,7 +143,7 @@ class StandInModel:
         hold = self._quantity(settings_si, "hold", n)
         scale = self._scale(settings_si, n)
         uniform, normal = shot_draws(self._seed, ordinal)
-        walks = self._walks.at(start_s)
+        walks = self._walks.at(start_s) if self._drifts else np.zeros((n, len(DRIFTING) + len(self.profile.readings)))
         drift = {name: walks[:, i] * self._number[f"drift.{name}"] for i, name in enumerate(DRIFTING)}
         turn = np.sin(2 * np.pi * (start_s + hold / 2) / self.profile.rhythm_s)
         acceleration = drift["acceleration"] + self._number["noise.acceleration"] * normal[:, 0]
