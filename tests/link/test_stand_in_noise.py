@@ -11,6 +11,7 @@ import pytest
 from scipy import stats
 
 from planner.arrays import FloatArray
+from planner.link.stand_in.draws import Unlocks, binomial, shot_draws
 from planner.link.stand_in.drifts import SPAN_S, Walks
 from planner.link.stand_in.model import StandInModel
 from tests.link.stand_in_profiles import model, play, profile, share
@@ -50,6 +51,28 @@ def test_shot_noise(atoms: int, readout: float) -> None:
     mean = 0.5 + 0.31 * np.exp(-2 * 36 / 1000) * np.cos(readout)
     assert abs(float(np.mean(y)) - mean) < 5 * np.sqrt(mean * (1 - mean) / left / y.size)
     within(y, mean * (1 - mean) / left)
+
+
+def test_the_normal_numbers_are_normal() -> None:
+    """240,000 of them, eight a shot: a normal distribution of unit variance, and none knows of its neighbours."""
+    uniform, normal = shot_draws(5, np.arange(1, 30_001))
+    within(normal.ravel(), 1.0)  # chi-square's bounds are 1.4 % apart from 1 here
+    assert stats.kstest(normal.ravel(), "norm").pvalue > RARE
+    assert stats.kstest(uniform.ravel(), "uniform").pvalue > RARE
+    together = np.concatenate([normal, uniform[:, 16:]], axis=1)
+    assert np.max(np.abs(np.corrcoef(together.T) - np.eye(16))) < 6 / np.sqrt(30_000)
+    next_shot = np.sum(normal[1:] * normal[:-1], axis=0) / 30_000
+    assert np.max(np.abs(next_shot)) < 6 / np.sqrt(30_000)
+
+
+@pytest.mark.parametrize(("atoms", "chance"), [(3000, 0.3), (20_000, 0.9), (1e6, 0.01)])
+def test_many_atoms_scatter_as_the_binomial(atoms: float, chance: float) -> None:
+    """Variance N p (1 - p) to 1.5 % in 200,000 draws; whole numbers, whose rounding adds a twelfth."""
+    uniform, normal = shot_draws(6, np.arange(1, 25_001))
+    found = binomial(np.full(200_000, atoms), np.full(200_000, chance), normal.ravel(), uniform[:, 16:].ravel())
+    variance = atoms * chance * (1 - chance)
+    assert float(np.mean(found)) == pytest.approx(atoms * chance, abs=5 * np.sqrt(variance / 200_000))
+    within(found, variance, slack=1 / (12 * variance))
 
 
 def test_few_atoms_are_binomial() -> None:
@@ -191,6 +214,9 @@ def test_each_drift_has_its_declared_size(one: Drifting) -> None:
     assert np.all(np.abs(found[:, 0]) < 5e-4)  # the shot noise of 1e9 atoms, in a phase, is 6e-5
     for place, hours in enumerate(times[1:] / 3600, start=1):
         within(found[:, place], one.rms**2 * hours / 10, slack=0.04)  # the walk closes after 16 days: 4 % at 20 h
+    # the changes over ten hours one after another, 38 of them in 16 days and 60 seeds: their variance to 14 %
+    long = np.array([drift_of(rig, 36_000.0 * np.arange(39.0), one.seen) for rig in seeds(changes, 60)])
+    within(np.diff(long, axis=1).ravel(), one.rms**2, slack=0.01)
 
 
 def test_drifts_are_independent() -> None:
@@ -224,6 +250,7 @@ def test_the_rhythm_of_the_room(kind: str, written: object, amplitude: float) ->
     assert int(np.argmax(np.abs(wave))) == 30
     angle = 2 * np.pi * (times + 1.0) / 1200.0  # holds of 2 s
     assert 2 / 720 * np.sum(found * np.sin(angle)) == pytest.approx(amplitude, abs=tolerance)
+    assert 2 / 720 * np.sum(found * np.cos(angle)) == pytest.approx(0.0, abs=tolerance)  # it is a sine, from the origin
     assert np.max(np.abs(np.delete(wave, 30))) < 2 * tolerance
 
 
@@ -264,6 +291,13 @@ def test_unlocks_come_at_the_declared_rate() -> None:
     times = 1800.0 * np.arange(400.0)  # further apart than an unlock lasts: independent
     hit = int(np.sum([play(rig, times, hold=1.0).unlocked for rig in rigs]))
     assert stats.binomtest(hit, 4000, float(-np.expm1(-2 * 4 / 60))).pvalue > RARE
+
+
+def test_many_unlocks_fill_the_whole_hour() -> None:
+    """At 2000 an hour, a second each: moments ten seconds apart lie in one with chance 1 - exp(-2000 / 3600)."""
+    found = Unlocks(8, 2000.0, 1.0).at(10.0 * np.arange(3600.0))
+    for quarter in np.split(found.reshape(10, 360), 4, axis=1):  # of each of ten hours
+        assert stats.binomtest(int(quarter.sum()), 900, float(-np.expm1(-2000 / 3600))).pvalue > RARE
 
 
 def test_unlocks_may_crowd_an_hour() -> None:
