@@ -207,15 +207,15 @@ def drift_of(rig: StandInModel, times: FloatArray, seen: str) -> FloatArray:
 
 @pytest.mark.parametrize("one", KINDS, ids=[one.kind for one in KINDS])
 def test_each_drift_has_its_declared_size(one: Drifting) -> None:
-    """Over 200 seeds the variance at 2.5, 5, 10 and 20 hours is the declared one times T / 10 h, and nothing at 0."""
+    """Over 120 seeds the variance at 2.5, 5, 10 and 20 hours is the declared one times T / 10 h, and nothing at 0."""
     times = 3600 * np.array([0.0, 2.5, 5.0, 10.0, 20.0])
     changes = {f"drift.{one.kind}": one.written, "cloud.atoms": 1e9, "cloud.cold_share": 1.0, "loss.vacuum": "1e6 s"}
-    found = np.array([drift_of(rig, times, one.seen) for rig in seeds(changes, 200)])
+    found = np.array([drift_of(rig, times, one.seen) for rig in seeds(changes, 120)])
     assert np.all(np.abs(found[:, 0]) < 5e-4)  # the shot noise of 1e9 atoms, in a phase, is 6e-5
     for place, hours in enumerate(times[1:] / 3600, start=1):
         within(found[:, place], one.rms**2 * hours / 10, slack=0.04)  # the walk closes after 16 days: 4 % at 20 h
-    # the changes over ten hours one after another, 38 of them in 16 days and 60 seeds: their variance to 14 %
-    long = np.array([drift_of(rig, 36_000.0 * np.arange(39.0), one.seen) for rig in seeds(changes, 60)])
+    # the changes over ten hours one after another, 38 of them in 16 days and 40 seeds: their variance to 18 %
+    long = np.array([drift_of(rig, 36_000.0 * np.arange(39.0), one.seen) for rig in seeds(changes, 40)])
     within(np.diff(long, axis=1).ravel(), one.rms**2, slack=0.01)
 
 

@@ -117,14 +117,14 @@ def night(changes: Mapping[str, Any]) -> object:
     """Three nights, and what the rig says of itself: all that a user can see of a profile."""
     profile = parse_profile(toml(table({**LOUD_TIDE, **changes}, BASE)), "profile.toml")
     rig, able = StandInModel(profile, 5), capabilities_of(profile)
-    times = 50.0 * np.arange(150.0)
-    signs = {"collar": np.resize([1.0, -1.0], 150), "kick": np.resize([1.0, 1.0, -1.0, -1.0], 150)}
-    loads = rig.loads(times, np.full(150, 40.0))
+    times = 125.0 * np.arange(60.0)
+    signs = {"collar": np.resize([1.0, -1.0], 60), "kick": np.resize([1.0, 1.0, -1.0, -1.0], 60)}
+    loads = rig.loads(times, np.full(60, 40.0))
     nights = []
-    moved = {"hold": np.full(150, 4.0), "depth": np.full(150, 3.0), "readout": np.resize([0.0, 1.5], 150)}
-    tuned = {**moved, "cooling": np.full(150, 0.1), "detuning": np.full(150, 30e3)}  # off rest, and off the best
+    moved = {"hold": np.full(60, 4.0), "depth": np.full(60, 3.0), "readout": np.resize([0.0, 1.5], 60)}
+    tuned = {**moved, "cooling": np.full(60, 0.1), "detuning": np.full(60, 30e3)}  # off rest, and off the best
     for settings in ({}, moved, tuned):
-        counts = rig.night(settings, signs, times, np.arange(150), load=loads)
+        counts = rig.night(settings, signs, times, np.arange(60), load=loads)
         columns = [counts.atoms_a, counts.atoms_b, counts.background, counts.saturated, *counts.readings.values()]
         nights.append([column.tobytes() for column in columns])
     return able, nights
@@ -203,7 +203,7 @@ def test_every_number_is_bounded(place: str) -> None:
 def test_every_unit_is_checked(place: str) -> None:
     """A quantity of another dimension, a quantity without unit, a plain number with one: each is told in its line."""
     number = EVERY[place]
-    wrong: list[Any] = ["5 kg", True, ["1"], "1,5 s", "nan"]
+    wrong: list[Any] = ["5 kg", True, "1,5 s", "nan"]
     wrong += [1.5, "1.5"] if number.unit else []
     for value in wrong:
         line, problem = only({place: value})
