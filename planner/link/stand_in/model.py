@@ -1,11 +1,11 @@
 """The stand-in's physics: what the simulated instrument counts, one shot or a whole night at a time.
 
 A model of our own, simple enough to be known exactly: two classes of atoms, a contrast that falls with depth times
-separation, losses apart from it, shot-to-shot noise, slow drifts, a memory of earlier shots, rare faults.
+separation, losses apart from it, shot-to-shot noise, slow drifts and tides, a memory of earlier shots, rare faults.
 
-Everything random is a function of (seed, ordinal) and every drift a function of (seed, time): the same shots at the
-same times give the same counts, in whatever pieces they are asked for, and a restarted rig goes on as if it had never
-stopped.
+Everything random is a function of (seed, ordinal), every drift and fault of a laser a function of (seed, time): the
+same shots at the same times give the same counts, in whatever pieces they are asked for. A restarted rig so goes on as
+if it had never stopped, save that the load of the shots before is gone: it begins at nothing, as after a power cut.
 """
 
 from collections.abc import Mapping, Sequence
@@ -15,8 +15,10 @@ from typing import Protocol
 import numpy as np
 
 from planner.arrays import BoolArray, FloatArray, IntArray
+from planner.link.stand_in.draws import NORMALS, Unlocks, binomial, shot_draws
 from planner.link.stand_in.drifts import Walks
 from planner.link.stand_in.profile import Profile
+from planner.link.stand_in.tide import mean_acceleration
 from planner.physics.atoms import atom
 from planner.physics.bloch import tunnelling_loss_rate
 from planner.physics.constants import STANDARD_GRAVITY
@@ -25,10 +27,7 @@ from planner.physics.interferometer import scale_factor
 from planner.physics.loss import population
 
 DRIFTING = ("phase", "acceleration", "offset", "contrast", "atoms")
-NORMALS = 8  # normal numbers of each shot, each from two uniform ones
-DRAWS = 24  # uniform numbers of each shot: those behind the normal ones, and eight of their own
-WORDS_A_BLOCK = 4  # the counter-based generator (Philox) makes four words a step
-EXACT_BELOW = 1000  # atoms below which the outcome is drawn from the binomial itself, not its normal limit
+FADED = 1e-12  # a load that has fallen to this share of its beginning is left out
 
 
 class PastShot(Protocol):
@@ -84,7 +83,10 @@ class StandInModel:
         self._seed = seed
         self._mass = atom(profile.atom).mass_kg
         self._number = profile.numbers
+        walking = [self._number[f"drift.{name}"] for name in DRIFTING] + [one.walk for one in profile.readings.values()]
+        self._drifts = any(walking)  # the walks are most of a shot's work; a rig that does not drift goes without
         self._walks = Walks(seed, len(DRIFTING) + len(profile.readings))
+        self._unlocks = Unlocks(seed, self._number["faults.unlocks_per_hour"], self._number["faults.unlock_lasts"])
 
     def shot(
         self,
@@ -100,9 +102,12 @@ class StandInModel:
             for name, states in self.profile.switches.items()
         }
         load = 0.0
-        for past in history:
+        for past in reversed(history):
             end = past.start_s + past.duration_s
-            load += self._left(past.duration_s) * float(np.exp(-max(0.0, start_s - end) / self._number["memory.fades"]))
+            still = float(np.exp(-max(0.0, start_s - end) / self._number["memory.fades"]))
+            if still < FADED:
+                break
+            load += self._left(past.duration_s) * still
         counts = self.night(
             {name: np.array([value]) for name, value in settings_si.items()},
             signs,
@@ -137,20 +142,21 @@ class StandInModel:
         n = len(start_s)
         hold = self._quantity(settings_si, "hold", n)
         scale = self._scale(settings_si, n)
-        uniform, normal = self._random(ordinal)
-        walks = self._walks.at(start_s)
+        uniform, normal = shot_draws(self._seed, ordinal)
+        walks = self._walks.at(start_s) if self._drifts else np.zeros((n, len(DRIFTING) + len(self.profile.readings)))
         drift = {name: walks[:, i] * self._number[f"drift.{name}"] for i, name in enumerate(DRIFTING)}
         turn = np.sin(2 * np.pi * (start_s + hold / 2) / self.profile.rhythm_s)
         acceleration = drift["acceleration"] + self._number["noise.acceleration"] * normal[:, 0]
+        acceleration += mean_acceleration(self.profile.tide, start_s, hold)
         phase = truth.phase_rad + drift["phase"] + self._number["noise.phase"] * normal[:, 1] + scale * acceleration
         phase += self.profile.rhythm_phase_rad * turn
-        unlocked = self._unlocked(start_s)
+        unlocked = self._unlocks.at(start_s)
         contrast = np.where(unlocked, 0.0, np.clip(truth.contrast * (1 + drift["contrast"]), 0.0, 1.0))
         atoms = truth.atoms * (1 + drift["atoms"] + self._number["noise.atoms"] * normal[:, 2])
         atoms = np.maximum(atoms * (1 + self._number["memory.strength"] * load), 0.0).round()
         offset = 0.5 + drift["offset"] + self.profile.rhythm_offset * turn
         fraction = np.clip(offset + contrast / 2 * np.cos(phase), 0.0, 1.0)
-        in_a = _binomial(atoms, fraction, normal[:, 3], uniform[:, 2 * NORMALS])
+        in_a = binomial(atoms, fraction, normal[:, 3], uniform[:, 2 * NORMALS])
         outlier = uniform[:, 2 * NORMALS + 1] < self._number["faults.outliers"]
         in_a = np.where(outlier, np.round(uniform[:, 2 * NORMALS + 2] * atoms), in_a)
         detection, background = self._number["noise.detection"], self._number["noise.background"]
@@ -161,13 +167,13 @@ class StandInModel:
         readings = {
             name: reading.mean
             + reading.walk * walks[:, len(DRIFTING) + index]
-            + reading.noise * self._random(ordinal, stream=1 + index)[1][:, 0]
+            + reading.noise * shot_draws(self._seed, ordinal, stream=1 + index)[1][:, 0]
             for index, (name, reading) in enumerate(self.profile.readings.items())
         }
         return Counts(
             atoms_a=np.minimum(atoms_a, full),
             atoms_b=np.minimum(atoms_b, full),
-            background=background + np.sqrt(max(background, 1.0)) * normal[:, 6],
+            background=background + np.sqrt(background) * normal[:, 6],
             saturated=saturated,
             readings=readings,
             unlocked=unlocked,
@@ -175,8 +181,8 @@ class StandInModel:
         )
 
     def expected(self, settings_si: Mapping[str, FloatArray], signs: Mapping[str, FloatArray]) -> Truth:
-        """The output without noise, drift, memory and faults, for columns of settings and signs (n_shot,)."""
-        n = len(next(iter(settings_si.values())))
+        """The output without noise, drift, tide, memory and faults, for columns of settings and signs (n_shot,)."""
+        n = len(next(iter([*settings_si.values(), *signs.values()]), np.ones(1)))
         hold, depth = self._quantity(settings_si, "hold", n), self._quantity(settings_si, "depth", n)
         apart = self._quantity(settings_si, "separation", n)
         cooling, detuning = self._quantity(settings_si, "cooling", n), self._quantity(settings_si, "detuning", n)
@@ -237,61 +243,3 @@ class StandInModel:
         return scale_factor(
             self._mass, self._quantity(settings_si, "separation", n), self._quantity(settings_si, "hold", n)
         )
-
-    def _unlocked(self, start_s: FloatArray) -> BoolArray:
-        """Whether each time lies within an unlock: one may begin in each hour, by a draw for that hour."""
-        rate, lasts = self._number["faults.unlocks_per_hour"], self._number["faults.unlock_lasts"]
-        out = np.zeros(len(start_s), dtype=np.bool_)
-        if rate <= 0.0 or lasts <= 0.0:
-            return out
-        back = int(np.ceil(lasts / 3600)) + 1
-        hours = np.floor(start_s / 3600).astype(np.int64)
-        for ago in range(back):
-            uniform, _ = self._random(hours - ago, stream=1000)
-            begins = (hours - ago + uniform[:, 1]) * 3600
-            hit = uniform[:, 0] < -np.expm1(-rate)
-            out |= hit & (begins <= start_s) & (start_s < begins + lasts)
-        return out
-
-    def _random(self, ordinal: IntArray, stream: int = 0) -> tuple[FloatArray, FloatArray]:
-        """Uniform (n, DRAWS) and normal (n, NORMALS) numbers that belong to each ordinal.
-
-        The normal ones are made from the first 2 NORMALS uniforms in pairs (Box & Muller); draws that are used as
-        uniform take later columns.
-        """
-        first = int(ordinal.min()) if len(ordinal) else 0
-        count = int(ordinal.max()) - first + 1 if len(ordinal) else 0
-        if count > 4 * len(ordinal) + 64:  # far apart: each by itself
-            parts = [self._random(ordinal[i : i + 1], stream) for i in range(len(ordinal))]
-            return np.concatenate([u for u, _ in parts]), np.concatenate([v for _, v in parts])
-        key = np.random.SeedSequence(self._seed, spawn_key=(stream,)).generate_state(2, np.uint64)
-        counter = (first * DRAWS // WORDS_A_BLOCK) % 2**256
-        words = np.random.Philox(key=key, counter=counter).random_raw(count * DRAWS).reshape(count, DRAWS)
-        uniform = np.asarray(((words[ordinal - first] >> np.uint64(11)) + 0.5) * 2.0**-53, dtype=np.float64)
-        radius = np.sqrt(-2 * np.log(uniform[:, :NORMALS]))
-        normal = np.asarray(radius * np.cos(2 * np.pi * uniform[:, NORMALS : 2 * NORMALS]), dtype=np.float64)
-        return uniform, normal
-
-
-def _binomial(atoms: FloatArray, fraction: FloatArray, normal: FloatArray, uniform: FloatArray) -> FloatArray:
-    """How many of `atoms` fall into output a, each with chance `fraction`: (n,) whole numbers.
-
-    The normal limit where both outputs expect many atoms; the distribution itself, by its running sum, elsewhere.
-    """
-    variance = atoms * fraction * (1 - fraction)
-    out = np.clip(np.round(atoms * fraction + np.sqrt(variance) * normal), 0.0, atoms)
-    for i in np.flatnonzero((variance < 25.0) | (atoms < EXACT_BELOW)):
-        out[i] = _binomial_exact(int(atoms[i]), float(fraction[i]), float(uniform[i]))
-    return out
-
-
-def _binomial_exact(n: int, p: float, uniform: float) -> float:
-    """The smallest k with P(K <= k) >= uniform, by summing up from the nearer end."""
-    if p <= 0.0 or n == 0:
-        return 0.0
-    if p > 0.5:
-        return n - _binomial_exact(n, 1 - p, uniform)
-    k = np.arange(min(n, int(n * p + 12 * np.sqrt(n * p * (1 - p)) + 30)) + 1)
-    steps = np.log((n - k[:-1]) / (k[1:])) + np.log(p / (1 - p))
-    log_chance = n * np.log1p(-p) + np.r_[0.0, np.cumsum(steps)]
-    return float(min(np.searchsorted(np.cumsum(np.exp(log_chance)), uniform), k[-1]))

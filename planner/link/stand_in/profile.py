@@ -6,103 +6,24 @@ Read with the same care as a sequence: every mistake at once, with its place.
 from collections.abc import Mapping
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Literal, get_args
 
-from planner.sequence.keys import Key, must
-from planner.sequence.nodes import Document, Fields, Node, parse_document, read_text
+from planner.errors import QuantityError
+from planner.link.stand_in.keys import (
+    BOUNDED,
+    MOST_WAVES,
+    NUMBERS,
+    QUANTITIES,
+    READING,
+    RHYTHM,
+    SCHEMA,
+    WAVE,
+    Number,
+)
+from planner.physics.atoms import ATOMS
+from planner.quantities import from_unit, parse_quantity
+from planner.sequence.nodes import Document, Fields, Node, parse_document, read_text, show
 
 VERSION = 1
-Quantity = Literal["hold", "readout", "depth", "separation", "cooling", "detuning"]
-QUANTITIES: tuple[str, ...] = get_args(Quantity)
-UNIT_OF = {"hold": "s", "readout": "rad", "depth": "Er", "separation": "m", "cooling": "s", "detuning": "Hz"}
-
-# section -> key -> (unit of the number, lowest, highest); "" is a plain number
-NUMBERS: dict[str, dict[str, tuple[str, float, float]]] = {
-    "signal": {"acceleration": ("m/s^2", -1.0, 1.0)},
-    "cloud": {
-        "atoms": ("", 0.0, 1e9),
-        "atoms_lost_cooling": ("s", 1e-3, 1e6),
-        "cold_share": ("", 0.0, 1.0),
-        "temperature_falls": ("s", 1e-3, 1e3),
-        "warmest": ("", 1.0, 1e3),
-    },
-    "contrast": {
-        "short_hold": ("", 0.0, 1.0),
-        "cold_constant": ("s Er m", 1e-9, 1.0),
-        "warm_constant": ("s Er m", 1e-9, 1.0),
-        "best_detuning": ("Hz", -1e9, 1e9),
-        "detuning_width": ("Hz", 1.0, 1e9),
-    },
-    "loss": {
-        "vacuum": ("s", 0.1, 1e6),
-        "per_depth": ("1/s", 0.0, 10.0),
-        "spill": ("1/s", 0.0, 100.0),
-        "spill_depth": ("Er", 1e-3, 1e3),
-    },
-    "noise": {
-        "phase": ("rad", 0.0, 10.0),
-        "acceleration": ("m/s^2", 0.0, 1.0),
-        "atoms": ("", 0.0, 1.0),
-        "detection": ("", 0.0, 1e6),
-        "background": ("", 0.0, 1e9),
-        "saturates": ("", 1.0, 1e12),
-    },
-    "memory": {"strength": ("", -1.0, 1.0), "fades": ("s", 1e-3, 1e5)},
-    "drift": {
-        "phase": ("rad", 0.0, 100.0),
-        "acceleration": ("m/s^2", 0.0, 1.0),
-        "offset": ("", 0.0, 0.5),
-        "contrast": ("", 0.0, 1.0),
-        "atoms": ("", 0.0, 1.0),
-    },
-    "faults": {"unlocks_per_hour": ("", 0.0, 3600.0), "unlock_lasts": ("s", 0.0, 1e5), "outliers": ("", 0.0, 1.0)},
-    "site": {"latitude": ("rad", -2.0, 2.0), "longitude": ("rad", -7.0, 7.0), "height": ("m", -500.0, 9000.0)},
-}
-MUST = ("cloud", "contrast", "loss", "noise")  # sections that a profile cannot do without
-
-
-def _schema() -> dict[str, dict[str, Key]]:
-    schema = {
-        section: {key: Key("a number of the model") for key in keys} | {"about": Key("remarks")}
-        for section, keys in NUMBERS.items()
-    }
-    for section in MUST:
-        schema[section] |= {key: must("a number of the model") for key in NUMBERS[section]}
-    schema[""] = {
-        "nightfringe_stand_in": must("version of this language: 1"),
-        "name": must("name of the simulated rig"),
-        "about": Key("remarks"),
-        "atom": must("isotope"),
-        "wavelength": must("wavelength of the lattice light"),
-        "settings": must("what the rig accepts"),
-        "rest": Key("quantities that a sequence has no setting for"),
-        "switches": Key("two-state reversals"),
-        "readings": Key("what is logged with each shot"),
-        **{section: (must if section in MUST else Key)("numbers of the model") for section in NUMBERS},
-    }
-    schema["settings.<name>"] = {
-        "unit": must("unit at the rig"),
-        "range": Key("lowest and highest value"),
-        "plays": Key("the model's quantity that it moves"),
-    }
-    schema["rest"] = {name: Key("value") for name in QUANTITIES}
-    schema["readings.<name>"] = {
-        "unit": must("unit of the numbers"),
-        "mean": must("mean"),
-        "walk": Key("RMS of its walk over ten hours"),
-        "noise": Key("RMS noise of one reading"),
-    }
-    schema["signal"]["follows"] = must("switches whose product it follows")
-    schema["drift"]["air_handling"] = Key("a rhythm of the room")
-    schema["drift.air_handling"] = {
-        "period": must("period"),
-        "phase": Key("amplitude of phase"),
-        "offset": Key("amplitude of offset"),
-    }
-    return schema
-
-
-SCHEMA = _schema()
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -126,6 +47,15 @@ class Reading:
 
 
 @dataclass(frozen=True, kw_only=True)
+class Wave:
+    """One wave of the tide: amplitude cos(2 pi t / period + phase), t from where the drifts begin."""
+
+    period_s: float
+    amplitude: float  # m/s^2
+    phase_rad: float
+
+
+@dataclass(frozen=True, kw_only=True)
 class Profile:
     """A checked profile. `numbers` maps "section.key" to SI values; `follows` are the switches of the signal."""
 
@@ -142,6 +72,7 @@ class Profile:
     rhythm_s: float
     rhythm_phase_rad: float
     rhythm_offset: float
+    tide: tuple[Wave, ...]
 
 
 DEFAULT_REST = {"hold": 1.0, "readout": 0.0, "depth": 9.0, "separation": 4e-6, "cooling": 0.4, "detuning": 0.0}
@@ -165,53 +96,54 @@ def parse_profile(text: str, file: str) -> Profile:
     document = parse_document(text, file, SCHEMA)
     fields = document.root().fields("")
     version = fields.get("nightfringe_stand_in")
-    if version and version.whole(VERSION, VERSION) is None:
-        pass  # noted: another version of the profile's language
-    numbers = {f"{section}.{key}": value for section in NUMBERS for key, value in _numbers(fields, section).items()}
+    if version:
+        version.whole(VERSION, VERSION)
+    numbers: dict[str, float] = {"memory.fades": 60.0}
+    inside = {section: fields.get(section) for section in NUMBERS}
+    tables = {section: node.fields(section) for section, node in inside.items() if node}
+    for section, keys in NUMBERS.items():
+        found = _numbers(tables.get(section), keys)
+        numbers |= {f"{section}.{key}": found.get(key, numbers.get(f"{section}.{key}", 0.0)) for key in keys}
     switches = _switches(fields.get("switches"))
-    signal = fields.get("signal")
-    follows = _follows(signal.fields("signal").get("follows"), switches) if signal else ()
-    rhythm = _rhythm(fields.get("drift"))
-    name, atom_name, wavelength = fields.get("name"), fields.get("atom"), fields.get("wavelength")
+    rhythm = _rhythm(tables.get("drift"))
+    name, atom, wavelength = fields.get("name"), fields.get("atom"), fields.get("wavelength")
     profile = Profile(
-        name=(name.text() if name else None) or "stand-in",
+        name=(_name(name) if name else None) or "stand-in",
         text=text,
-        atom=_atom(atom_name),
+        atom=(atom.choice(ATOMS, "atom") if atom else None) or ATOMS[0],
         wavelength_m=(wavelength.quantity("m", low=1e-7, high=1e-4) if wavelength else None) or 1e-6,
         settings=_settings(fields.get("settings"), document),
-        rest={**DEFAULT_REST, **_rest(fields.get("rest"))},
+        rest=DEFAULT_REST | _rest(fields.get("rest")),
         switches=switches,
         readings=_readings(fields.get("readings")),
         numbers=numbers,
-        follows=follows,
-        rhythm_s=rhythm[0],
-        rhythm_phase_rad=rhythm[1],
-        rhythm_offset=rhythm[2],
+        follows=_follows(tables.get("signal"), switches),
+        rhythm_s=rhythm.get("period", 1200.0),
+        rhythm_phase_rad=rhythm.get("phase", 0.0),
+        rhythm_offset=rhythm.get("offset", 0.0),
+        tide=_tide(fields.get("tide")),
     )
     document.finish()
     return profile
 
 
-def _numbers(fields: Fields, section: str) -> dict[str, float]:
-    node = fields.get(section)
-    found = dict.fromkeys(NUMBERS[section], 0.0)
-    if section == "memory":
-        found["fades"] = 60.0
-    if node is None:
-        return found
-    inside = node.fields(section)
-    for key, (unit_text, low, high) in NUMBERS[section].items():
-        value_node = inside.get(key)
-        value = value_node.quantity(unit_text, low=low, high=high) if value_node else None
-        if value is not None:
-            found[key] = value
-    return found
+def _number(node: Node | None, number: Number) -> float | None:
+    return node.quantity(number.unit, low=number.low, high=number.high) if node else None
 
 
-def _atom(node: Node | None) -> str:
-    from planner.physics.atoms import ATOMS
+def _numbers(fields: Fields | None, keys: Mapping[str, Number]) -> dict[str, float]:
+    """Those of `keys` that stand in a table, SI."""
+    if fields is None:
+        return {}
+    values = {key: _number(fields.get(key), number) for key, number in keys.items()}
+    return {key: value for key, value in values.items() if value is not None}
 
-    return (node.choice(ATOMS, "atom") if node else None) or ATOMS[0]
+
+def _name(node: Node) -> str | None:
+    name = node.text()
+    if name is not None and not name.strip():
+        node.problem("expected a name; found nothing between the quotation marks")
+    return name
 
 
 def _settings(node: Node | None, document: Document) -> dict[str, ProfileSetting]:
@@ -222,11 +154,13 @@ def _settings(node: Node | None, document: Document) -> dict[str, ProfileSetting
         unit_node, range_node, plays_node = inside.get("unit"), inside.get("range"), inside.get("plays")
         unit_text = unit_node.unit_text() if unit_node else None
         limits = _limits(range_node) if range_node else None
-        plays = plays_node.choice(QUANTITIES, "quantity of the model") if plays_node else None
+        plays = plays_node.choice(list(QUANTITIES), "quantity of the model") if plays_node else None
         if plays is not None and plays_node is not None:
             if plays in played:
                 plays_node.problem(f'"{played[plays]}" plays {plays} already')
             played[plays] = name
+            if unit_text is not None and unit_node is not None:
+                _check_played(plays, unit_node, range_node, limits)
         if unit_text is not None:
             low, high = limits or (None, None)
             found[name] = ProfileSetting(unit=unit_text, low=low, high=high, plays=plays)
@@ -235,29 +169,46 @@ def _settings(node: Node | None, document: Document) -> dict[str, ProfileSetting
     return found
 
 
+def _check_played(plays: str, unit_node: Node, range_node: Node | None, limits: tuple[float, float] | None) -> None:
+    """A setting that plays a quantity has its dimension, and lets nothing through that the model cannot compute."""
+    number, unit_text = QUANTITIES[plays], str(unit_node.value).strip()
+    try:
+        parse_quantity(f"1 {unit_text}".strip(), number.unit)
+    except QuantityError:
+        unit_node.problem(f"expected a unit of {plays}, such as {number.unit}; found {show(unit_node.value)}")
+        return
+    if range_node is None and plays in BOUNDED:
+        unit_node.document.problem(
+            unit_node.path[:-1],
+            f'"range" is missing: a setting that plays {plays} needs one',
+            f"within {number.low:g} to {number.high:g} {number.unit}",
+            key=True,
+        )
+    if range_node is None or limits is None:
+        return
+    low, high = (from_unit(end, unit_text) for end in limits)
+    if low < number.low or high > number.high:
+        range_node.problem(
+            f"expected {plays} within {number.low:g} to {number.high:g} {number.unit}; "
+            f"found {low:g} to {high:g} {number.unit}"
+        )
+
+
 def _limits(node: Node) -> tuple[float, float] | None:
-    ends = [item.number() for item in node.items("numbers", 2)]
-    if len(ends) != 2 or ends[0] is None or ends[1] is None:
-        if not node.document.problems:
-            node.problem("expected [lowest, highest]")
+    if not isinstance(node.value, list) or len(node.value) != 2:
+        node.problem(f"expected [lowest, highest]; found {show(node.value)}")
         return None
-    if ends[0] >= ends[1]:
-        node.problem("expected [lowest, highest], the lower one first")
+    low, high = (node.child(place, value).number() for place, value in enumerate(node.value))
+    if low is None or high is None:
         return None
-    return ends[0], ends[1]
+    if low >= high:
+        node.problem(f"expected [lowest, highest], the lower one first; found [{low:g}, {high:g}]")
+        return None
+    return low, high
 
 
 def _rest(node: Node | None) -> dict[str, float]:
-    if node is None:
-        return {}
-    inside = node.fields("rest")
-    found = {}
-    for name in QUANTITIES:
-        one = inside.get(name)
-        value = one.quantity(UNIT_OF[name]) if one else None
-        if value is not None:
-            found[name] = value
-    return found
+    return _numbers(node.fields("rest"), QUANTITIES) if node else {}
 
 
 def _switches(node: Node | None) -> dict[str, tuple[str, str]]:
@@ -271,23 +222,34 @@ def _switches(node: Node | None) -> dict[str, tuple[str, str]]:
     return found
 
 
-def _follows(node: Node | None, switches: Mapping[str, tuple[str, str]]) -> tuple[str, ...]:
+def _follows(signal: Fields | None, switches: Mapping[str, tuple[str, str]]) -> tuple[str, ...]:
+    node = signal.get("follows") if signal else None
     if node is None:
         return ()
     names = [item.choice(list(switches), "switch") for item in node.items("switches", 8)]
-    return tuple(name for name in names if name)
+    known = tuple(name for name in names if name)
+    if node.value == []:
+        node.problem("expected at least one switch; found an empty list")
+    if len(set(known)) < len(known):
+        node.problem("expected each switch once; a switch that stands twice cancels itself")
+    return known
 
 
-def _rhythm(drift: Node | None) -> tuple[float, float, float]:
-    node = drift.fields("drift").get("air_handling") if drift else None
-    if node is None:
-        return 1200.0, 0.0, 0.0
-    inside = node.fields("drift.air_handling")
-    period, phase, offset = inside.get("period"), inside.get("phase"), inside.get("offset")
-    return (
-        (period.quantity("s", low=1.0) if period else None) or 1200.0,
-        (phase.quantity("rad", low=0.0) if phase else None) or 0.0,
-        (offset.quantity("", bare=True, low=0.0) if offset else None) or 0.0,
+def _rhythm(drift: Fields | None) -> dict[str, float]:
+    node = drift.get("air_handling") if drift else None
+    return _numbers(node.fields("drift.air_handling"), RHYTHM) if node else {}
+
+
+def _tide(node: Node | None) -> tuple[Wave, ...]:
+    named = node.named("waves") if node else {}
+    if node is not None and len(named) > MOST_WAVES:
+        node.problem(f"at most {MOST_WAVES} waves; found {len(named)}")
+        return ()
+    found = [_numbers(one.fields("tide.<name>"), WAVE) for one in named.values()]
+    return tuple(
+        Wave(period_s=wave["period"], amplitude=wave["amplitude"], phase_rad=wave.get("phase", 0.0))
+        for wave in found
+        if {"period", "amplitude"} <= set(wave)
     )
 
 
@@ -298,8 +260,11 @@ def _readings(node: Node | None) -> dict[str, Reading]:
         unit_node = inside.get("unit")
         unit_text = unit_node.unit_text() if unit_node else None
         values = {}
-        for key in ("mean", "walk", "noise"):
+        for key, (low, _) in READING.items():
             value_node = inside.get(key)
-            values[key] = (value_node.number() if value_node else None) or 0.0
+            value = value_node.number() if value_node else None
+            if value is not None and value < low and value_node is not None:
+                value_node.problem(f"expected at least {low:g}; found {show(value_node.value)}")
+            values[key] = value or 0.0
         found[name] = Reading(unit=unit_text or "", mean=values["mean"], walk=values["walk"], noise=values["noise"])
     return found
