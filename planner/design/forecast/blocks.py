@@ -1,9 +1,9 @@
-"""Trials in blocks, each with a random stream of its own: the same numbers on one core, on many, or on other machines."""
+"""Trials in blocks, each with a random stream of its own: the same numbers on one core, on many, on other machines."""
 
 from collections.abc import Callable, Iterable
 
 import numpy as np
-from threadpoolctl import threadpool_limits
+from threadpoolctl import threadpool_limits  # type: ignore[import-untyped]
 
 from planner.arrays import FloatArray
 

@@ -107,11 +107,20 @@ def errors_of(plan: Plan, rig: Knowledge) -> dict[str, FloatArray]:
     if len(progress.hold_s) > 1:
         found |= time_scale_errors(rig, progress, contrast=told)
     if plan.points is not None:
-        found |= signal_errors(rig, plan.points, offset=plan.offset, fixed=plan.fixed)
+        # the night's last packets can be left out beforehand where drift makes them do harm, as in half a pair of dwells
+        raw = signal_errors(rig, plan.points, offset=plan.offset, fixed=plan.fixed)
+        found |= {name: np.minimum.accumulate(error) for name, error in raw.items()}
     own = OWN.get(kind, "")
     order = sorted(found, key=lambda name: name != own)
     scales = {"coherence time": rig.coherence_s, "population lifetime": rig.lifetime_s}
     return {name: found[name] for name in order if name == own or found[name][-1] < scales.get(name, np.inf)}
+
+
+def best_signal_s(plan: Plan, rig: Knowledge) -> float:
+    """The time up to which packets count for the smallest error of the signal: the end, or where drift does less."""
+    if plan.points is None:
+        return float(plan.time_s[-1])
+    return float(plan.time_s[int(np.argmin(signal_errors(rig, plan.points)["signal"]))])
 
 
 def forecasts(plan: Plan, rig: Knowledge, *, seed: int = 0, draws: int = DRAWS) -> list[Forecast]:

@@ -67,7 +67,7 @@ def modulation_error(rig: Knowledge, progress: Progress, period_s: float) -> Flo
     slopes = contrast[:, None] * np.stack(
         [np.ones(len(hold)), hold / rig.coherence_s, np.cos(turn), np.sin(turn)], axis=1
     )
-    return _contrast_error(rig, progress, slopes, np.eye(4)[:, 2:]) / np.sqrt(2.0)
+    return np.asarray(_contrast_error(rig, progress, slopes, np.eye(4)[:, 2:]) / np.sqrt(2.0))
 
 
 def level_error(rig: Knowledge, progress: Progress, plateau: float) -> FloatArray:

@@ -6,6 +6,7 @@ for that of the acceleration.
 
 from collections.abc import Mapping
 from dataclasses import dataclass, replace
+from typing import Any
 
 import numpy as np
 
@@ -94,7 +95,9 @@ class Night:
     def until(self, end_s: float) -> "Night":
         """The packets that are complete by a time."""
         keep = self.done_s <= end_s
-        columns = {name: value[keep] for name, value in vars(self).items() if isinstance(value, np.ndarray)}
+        columns: dict[str, Any] = {
+            name: value[keep] for name, value in vars(self).items() if isinstance(value, np.ndarray)
+        }
         return replace(self, **columns, settings={name: value[keep] for name, value in self.settings.items()})
 
 

@@ -5,8 +5,8 @@ what the night is for. The forecast works by formula; this is the same night pla
 
     y = 1/2 + (C/2 + sqrt2 sigma c(t)) cos(theta + phi + sqrt8 sigma b(t) / C + p kappa s) + sigma a(t) + noise
 
-a, b, c are additive, phase and contrast drift in single-shot noise sigma, b with the drift of the acceleration; p is the
-parity, s the signal. Single precision: a fraction is known to a thousandth at best.
+a, b, c are additive, phase and contrast drift in single-shot noise sigma, b with the drift of the acceleration; p is
+the parity, s the signal. Single precision: a fraction is known to a thousandth at best.
 """
 
 from dataclasses import dataclass

@@ -7,7 +7,7 @@ the sweeps. With I+ and I- the sums of q^2 / sigma^2 over the shots of either si
     kappa^2 4 I+ I- / (I+ + I-)
 
 of the signal: nothing before both signs were seen. The estimate is the weighted sum that reaches this,
-w = q kappa (p - mean p) / sigma^2, scaled; drift adds w'Kw (design/drift.py), for this estimate and this order, exactly.
+w = q kappa (p - mean p) / sigma^2, scaled; drift adds w'Kw (design/drift.py), exactly, for this estimate and order.
 """
 
 from dataclasses import dataclass
@@ -70,7 +70,7 @@ def information(rig: Knowledge, points: Points) -> FloatArray:
     each = q2 / shot_variance(rig, points.hold_s[:, None], contrast, points.phase_rad)
     plus, minus = np.moveaxis(np.einsum("tpks,pk->tps", points.counts, each), 2, 0)
     with np.errstate(invalid="ignore"):
-        return points.kappa**2 * np.nan_to_num(4 * plus * minus / (plus + minus))
+        return np.asarray(points.kappa**2 * np.nan_to_num(4 * plus * minus / (plus + minus)))
 
 
 def signal_errors(
@@ -137,7 +137,10 @@ def _drift_by(night: Night, rig: Knowledge, of_shot: IntArray, time: float) -> f
     weights, noise = estimate_weights(mine, rig, of_shot[keep]) if keep.any() else (np.zeros(0), np.inf)
     if not np.isfinite(noise):
         return 0.0
-    return sum(
-        float(added_variance(weights * response, mine.mid_s, getattr(mine.drift, kind)))
-        for kind, response in drift_reach(mine, rig)
-    ) / noise
+    return (
+        sum(
+            float(added_variance(weights * response, mine.mid_s, getattr(mine.drift, kind)))
+            for kind, response in drift_reach(mine, rig)
+        )
+        / noise
+    )

@@ -5,8 +5,8 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from planner.design.allocation.knowledge import Knowledge
-from planner.design.allocation.signal import Scale, signal_variance_rate
 from planner.design.forecast.curve import OWN, Forecast, Plan, errors_of
+from planner.design.forecast.progress import progress_of
 from planner.errors import PlanImpossible
 from planner.sequence.model import Sequence
 
@@ -73,24 +73,43 @@ def _nights(error: float, target: float, fixed: float) -> float:
     return (error**2 - fixed**2) / (target**2 - fixed**2)
 
 
-def alternatives(plan: Plan, rig: Knowledge, scale: Scale | None) -> list[Alternative]:
+def drift_share(plan: Plan, rig: Knowledge) -> dict[str, float]:
+    """How much wider drift makes each error at the end of the night, as a fraction of the error without it."""
+    steady = replace(
+        plan,
+        progress=progress_of(plan.night.without_drift(), plan.time_s),
+        points=None if plan.points is None else replace(plan.points, drift=np.zeros(len(plan.time_s))),
+    )
+    calm = errors_of(steady, rig)
+    return {
+        name: float(error[-1] / calm[name][-1]) - 1
+        for name, error in errors_of(plan, rig).items()
+        if np.isfinite(error[-1]) and calm[name][-1] > 0.0
+    }
+
+
+def alternatives(plan: Plan, rig: Knowledge) -> list[Alternative]:
     """Nearby plans by the hours they need for the same error of the goal's quantity, best first."""
     own = OWN.get(plan.goal.kind)
-    if own == "signal" and plan.points is not None and len(plan.points.hold_s) == 1 and scale is not None:
-        return _other_holds(rig, scale, float(plan.points.hold_s[0]))
+    if own == "signal" and plan.points is not None and len(plan.points.hold_s) == 1:
+        return _other_holds(plan, rig)
     if own in ("coherence time", "contrast at the worst hold", "plateau", "modulation depth"):
         return _other_packets(plan, rig, own)
     return []
 
 
-def _other_holds(rig: Knowledge, scale: Scale, hold_s: float) -> list[Alternative]:
-    holds = hold_s * np.array(HOLD_FACTORS)
-    holds = holds[(holds >= rig.shortest_s) & (holds <= rig.longest_s)]
-    now = float(signal_variance_rate(rig, scale, np.array([hold_s]))[0])
-    changes = signal_variance_rate(rig, scale, holds) / now
-    return _sorted(
-        [Alternative(words=f"a hold of {hold:.3g} s", hours_ratio=float(r)) for hold, r in zip(holds, changes, strict=True)]
-    )
+def _other_holds(plan: Plan, rig: Knowledge) -> list[Alternative]:
+    """Another hold for a signal: shots of the same phases there, at the same cost of dead time."""
+    night = plan.night
+    hold, kappa, stretch = float(night.hold_s[0]), float(night.kappa[0]), float(night.stretch[0])
+
+    def hours(at: float) -> float:
+        one = np.array([at])
+        contrast, atoms = float(rig.contrast_at(one / stretch)[0]), float(rig.atoms_at(one)[0])
+        return (at + rig.dead_s) / (contrast**2 * atoms * (kappa * at / hold) ** 2)
+
+    holds = [hold * f for f in HOLD_FACTORS if rig.shortest_s <= hold * f <= rig.longest_s]
+    return _sorted([Alternative(words=f"a hold of {at:.3g} s", hours_ratio=hours(at) / hours(hold)) for at in holds])
 
 
 def _other_packets(plan: Plan, rig: Knowledge, own: str) -> list[Alternative]:
