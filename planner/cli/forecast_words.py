@@ -95,7 +95,7 @@ def _rehearsals(rehearsed: dict[str, Any] | None) -> list[str]:
         return ["no rehearsals: only coherence time, population lifetime and signal can be rehearsed"]
     return [
         f"{rehearsed['trials']:,} rehearsed nights: {one['name']} off by {readable(one['rms_error'], one['unit'])} "
-        f"(RMS), forecast {readable(one['forecast_error'], one['unit'])}; 90 % find {readable(one['low'], one['unit'])} to "
-        f"{readable(one['high'], one['unit'])}, truth {readable(one['truth'], one['unit'])}"
+        f"(RMS), forecast {readable(one['forecast_error'], one['unit'])}; of {readable(one['truth'], one['unit'])} "
+        f"90 % find {readable(one['low'], one['unit'])} to {readable(one['high'], one['unit'])}"
         for one in rehearsed["quantities"]
     ]

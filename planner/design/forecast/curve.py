@@ -22,6 +22,7 @@ BAND = (0.05, 0.95)
 UNITS = {
     "modulation depth": "relative",
     "plateau": "contrast",
+    "contrast": "relative",
     "contrast at the worst hold": "relative",
     "coherence time": "s",
     "population lifetime": "s",
@@ -103,11 +104,12 @@ def errors_of(plan: Plan, rig: Knowledge) -> dict[str, FloatArray]:
     if told and kind == "plateau" and "plateau" in asked:
         found["plateau"] = level_error(rig, progress, asked["plateau"])
     if told and (kind == "curve" or len(progress.hold_s) == 1):
-        found["contrast at the worst hold"] = worst_contrast_error(rig, progress)
+        name = "contrast at the worst hold" if kind == "curve" else "contrast"
+        found[name] = worst_contrast_error(rig, progress)
     if len(progress.hold_s) > 1:
         found |= time_scale_errors(rig, progress, contrast=told)
     if plan.points is not None:
-        # the night's last packets can be left out beforehand where drift makes them do harm, as in half a pair of dwells
+        # the last packets can be left out beforehand where drift makes them do harm, as in half a pair of dwells
         raw = signal_errors(rig, plan.points, offset=plan.offset, fixed=plan.fixed)
         found |= {name: np.minimum.accumulate(error) for name, error in raw.items()}
     own = OWN.get(kind, "")

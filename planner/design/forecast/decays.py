@@ -107,13 +107,19 @@ def _moved(rig: Knowledge, progress: Progress) -> FloatArray | None:
 def packet_information(
     rig: Knowledge, progress: Progress, contrast: FloatArray | None = None
 ) -> tuple[FloatArray, FloatArray]:
-    """Information of one packet about contrast and about atoms at each hold, for packets of the order's own size."""
+    """Information of one packet about contrast and about atoms at each hold, for packets of the order's own size.
+
+    Drift inside packets counts as that much more noise. A packet's information is F nu^2 / (1 + nu^2), nu^2 = C^2 F
+    (knowledge.py); from it F, which goes as one over the noise.
+    """
+    true = rig.contrast_at(progress.hold_s) if contrast is None else contrast
     about_contrast, about_atoms = np.empty(len(progress.hold_s)), np.empty(len(progress.hold_s))
     for size in np.unique(progress.shots):
         mine = progress.shots == size
         one = replace(rig, phases=int(size), states=1)
-        about_contrast[mine] = one.contrast_information(
-            progress.hold_s[mine], None if contrast is None else contrast[mine]
-        )
+        about_contrast[mine] = one.contrast_information(progress.hold_s[mine], true[mine])
         about_atoms[mine] = one.atom_information(progress.hold_s[mine])
-    return about_contrast / (1 + progress.inside), about_atoms
+    strong = about_contrast / 2 + np.sqrt(about_contrast**2 / 4 + about_contrast / true**2)
+    less = strong / (1 + progress.inside)
+    seen = true**2 * less
+    return less * seen / (1 + seen), about_atoms
