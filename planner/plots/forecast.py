@@ -46,8 +46,12 @@ def _panel(panel: "Axes", one: "Forecast", colour: str, target: float | None) ->
     if target is not None:
         bottom, top = min(bottom, 0.85 * target * factor), max(top, 1.3 * target * factor)
         panel.axhline(target * factor, color=GREY, linestyle="--", linewidth=1.0)
+        at = one.reached_s(target)
+        if at is not None:
+            panel.plot([at / 3600], [target * factor], marker="o", color=GREY, markersize=4)
+        when = "not in this night" if at is None else f"after {at / 3600:.1f} h"
         panel.annotate(
-            f"target {target * factor:.3g} {unit}",
+            f"target {target * factor:.3g} {unit}: {when}",
             (hours[-1], target * factor),
             xytext=(-2, 3),
             textcoords="offset points",
