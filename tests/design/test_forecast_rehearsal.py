@@ -12,6 +12,7 @@ import numpy as np
 import pytest
 
 from planner.arrays import FloatArray
+from planner.cli import workers
 from planner.cli.workers import spread_over
 from planner.design.drift import Prior, added_variance
 from planner.design.forecast.blocks import BLOCK, in_blocks
@@ -121,17 +122,23 @@ def test_without_dask_the_message_says_what_to_install() -> None:
 
 
 @pytest.mark.skipif(find_spec("distributed") is None, reason="Dask is an extra")
-def test_a_cluster_gives_the_same_numbers_and_no_scheduler_is_said() -> None:
+def test_a_cluster_gives_the_same_numbers_and_no_scheduler_is_said(monkeypatch: pytest.MonkeyPatch) -> None:
     """A real scheduler and worker in this process; then an address where nobody listens."""
     import distributed
 
     with (
         distributed.LocalCluster(
-            n_workers=1, threads_per_worker=2, processes=False, dashboard_address=None, host="127.0.0.1"
+            n_workers=1,
+            threads_per_worker=2,
+            processes=False,
+            protocol="tcp://",
+            dashboard_address=None,
+            host="127.0.0.1",
         ) as cluster,
         spread_over(1, cluster.scheduler_address) as spread,
     ):
         there = in_blocks(walk, 2 * BLOCK + 3, 9, spread)
     assert np.array_equal(there, in_blocks(walk, 2 * BLOCK + 3, 9))
+    monkeypatch.setattr(workers, "ANSWER_S", 1.0)
     with pytest.raises(InputError, match="no Dask scheduler answers"), spread_over(1, "tcp://127.0.0.1:1"):
         pass
