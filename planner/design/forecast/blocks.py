@@ -1,37 +1,30 @@
 """Trials in blocks, each with a random stream of its own: the same numbers on one core, on many, on other machines."""
 
 from collections.abc import Callable, Iterable
-from dataclasses import dataclass
 
 import numpy as np
+from threadpoolctl import threadpool_limits  # type: ignore[import-untyped]
 
 from planner.arrays import FloatArray
 
 BLOCK = 500  # trials; fixed, so that the result does not depend on how many workers there are
-
-
-@dataclass(frozen=True, kw_only=True)
-class Block:
-    """Some trials: task(rng, trials=n) gives an array whose first axis are the trials."""
-
-    task: Callable[..., FloatArray]
-    seed: np.random.SeedSequence
-    trials: int
-
-
-def run_block(block: Block) -> FloatArray:
-    """One block's trials."""
-    return block.task(np.random.default_rng(block.seed), trials=block.trials)
-
-
+Task = Callable[[np.random.Generator, int], FloatArray]
+Block = tuple[Task, np.random.SeedSequence, int]
 Spread = Callable[[Callable[[Block], FloatArray], list[Block]], Iterable[FloatArray]]
 
 
-def in_blocks(task: Callable[..., FloatArray], trials: int, seed: int, spread: Spread = map) -> FloatArray:
-    """task(rng, trials=n) for all trials, joined along the first axis.
+def run_block(block: Block) -> FloatArray:
+    """One block's trials, on one thread: sums over threads would differ in their last digits from core to core."""
+    task, seed, trials = block
+    with threadpool_limits(limits=1):
+        return task(np.random.default_rng(seed), trials)
+
+
+def in_blocks(task: Task, trials: int, seed: int, spread: Spread = map) -> FloatArray:
+    """task(rng, n) for all trials, joined along the first axis.
 
     spread(function, blocks) runs the blocks wherever it likes and gives the results in their order; `map` does so here.
     """
     seeds = np.random.SeedSequence(seed).spawn(-(-trials // BLOCK))
-    blocks = [Block(task=task, seed=one, trials=min(BLOCK, trials - k * BLOCK)) for k, one in enumerate(seeds)]
+    blocks: list[Block] = [(task, one, min(BLOCK, trials - k * BLOCK)) for k, one in enumerate(seeds)]
     return np.concatenate(list(spread(run_block, blocks)))
