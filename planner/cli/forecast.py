@@ -1,7 +1,6 @@
 """`nightfringe forecast`: what a night will give, before it is run."""
 
 import json
-from collections.abc import Callable
 from typing import TYPE_CHECKING, Any
 
 import click
@@ -9,7 +8,6 @@ import click
 from planner.errors import InputError
 
 if TYPE_CHECKING:
-    from planner.arrays import FloatArray
     from planner.design.allocation.knowledge import Knowledge
     from planner.design.forecast.curve import Forecast, Plan
     from planner.design.forecast.target import Reached

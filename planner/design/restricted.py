@@ -268,7 +268,7 @@ class RestrictedSet:
             for row in np.flatnonzero(self._peaks(power + others) <= self.bars.peak_of_part):
                 signs[row] *= signs[row, 0]  # a flip and its opposite are one entry
                 kept[signs[row].astype(np.int8).tobytes()] = (signs[row], power[row])
-            # a part of some 13 to 20 units may have no more flips than are wanted: stop when hardly any new one turns up
+            # a part of 13 to 20 units may have no more flips than are wanted: stop when hardly any new one turns up
             quiet = quiet + 1 if len(kept) <= before + before // QUIET_SHARE else 0
             if len(kept) >= wanted or (kept and quiet == QUIET):
                 break

@@ -20,7 +20,6 @@ def figure(found: "list[Forecast]", title: str, target: float | None = None) -> 
     """One panel for each quantity, the goal's own first; target: that of the first one, in its unit."""
     import matplotlib
     from matplotlib.figure import Figure
-    from matplotlib.ticker import LogLocator, NullFormatter
 
     with matplotlib.rc_context(SETTINGS):
         drawing = Figure(figsize=(6.4, 2.2 * len(found) + 1.0), layout="constrained")

@@ -135,7 +135,7 @@ def test_no_result_is_looked_at() -> None:
     assert not any("atoms" in name or "result" in name for name in inspect.signature(replan).parameters)
 
 
-@settings(max_examples=4, deadline=None)
+@settings(max_examples=2, deadline=None)
 @given(st.floats(0.5, 9.0), st.floats(0.01, 3.0), st.integers(0, 5))
 def test_any_break_leaves_a_night_that_fits(at_h: float, lost_h: float, seed: int) -> None:
     """Wherever the break, the rest fits into the night, every packet is whole, and numbers go on from those before."""
