@@ -1,6 +1,6 @@
 """The live display of a running night, on standard error: a bar on a terminal, plain lines elsewhere."""
 
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from datetime import timedelta
 from typing import TYPE_CHECKING, Protocol
@@ -58,6 +58,23 @@ def night_display(row: "NightRow") -> Iterator[Display]:
                 )
 
         yield Bar()
+
+
+@contextmanager
+def steps_display() -> Iterator[Callable[[str, float], None]]:
+    """A bar on standard error for work that goes in steps, on a terminal; elsewhere nothing."""
+    from rich.console import Console
+
+    console = Console(stderr=True, highlight=False)
+    if not console.is_terminal:
+        yield lambda step, fraction: None
+        return
+    from rich.progress import BarColumn, Progress, TextColumn, TimeElapsedColumn
+
+    columns = (TextColumn("{task.description}"), BarColumn(), TimeElapsedColumn())
+    with Progress(*columns, console=console, transient=True) as bar:
+        task = bar.add_task("putting the shots in order", total=1.0)
+        yield lambda step, fraction: bar.update(task, description=step, completed=fraction)
 
 
 class _Lines:

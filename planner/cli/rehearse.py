@@ -13,19 +13,30 @@ MADE_HERE = ("nightfringe.sqlite", "journal.jsonl")  # what marks a folder as on
 
 
 @click.command()
-@click.argument("file", type=click.Path(path_type=Path))
+@click.argument("files", nargs=-1, required=True, type=click.Path(path_type=Path))
 @click.option("--folder", type=click.Path(path_type=Path), default=Path("rehearsal"), show_default=True)
 @click.option("--fresh", is_flag=True, help="begin anew: delete the folder's earlier rehearsal first")
 @click.option("--profile", type=click.Path(path_type=Path), help="the stand-in's profile [default: the gallery's]")
+@click.option("--share", "shares", multiple=True, help="of the night for each FILE in turn: 0.6 or 60%; needs --hours")
+@click.option("--hours", type=click.FloatRange(min=0, min_open=True), help="length of the night's window")
 @click.option("--seed", type=click.IntRange(min=0), default=1, show_default=True, help="for the random order")
 @click.option("--rig-seed", type=click.IntRange(min=0), default=1, show_default=True, help="for the stand-in's noise")
 @click.option("--json", "as_json", is_flag=True, help="print the results as one JSON object")
 def command(
-    file: Path, folder: Path, fresh: bool, profile: Path | None, seed: int, rig_seed: int, as_json: bool
+    files: tuple[Path, ...],
+    folder: Path,
+    fresh: bool,
+    profile: Path | None,
+    shares: tuple[str, ...],
+    hours: float | None,
+    seed: int,
+    rig_seed: int,
+    as_json: bool,
 ) -> int:
     """Rehearse a whole night on the stand-in rig.
 
-    FILE is a sequence file, or the name of one that ships with the program, such as hold-scan. The stand-in rig runs as
+    FILE is a sequence file, or the name of one that ships with the program, such as hold-scan; several make one night
+    in which they are interleaved. The stand-in rig runs as
     a server of its own on a loopback port, with a simulated clock: a ten-hour night passes in seconds, and everything
     above the rig link behaves as on a real one. Logbook, journal and pictures go to --folder; an interrupted rehearsal
     goes on when called again.
@@ -36,17 +47,27 @@ def command(
     from planner.analysis.results import summarise
     from planner.cli import results as results_command
     from planner.cli.run import book_night, connect, drive, find_night
+    from planner.cli.shares import read_shares
     from planner.link.stand_in.process import start_stand_in
     from planner.logbook import open_logbook
     from planner.resources import sequences_folder
 
-    sequence = find_sequence(file)
+    sequences = [str(find_sequence(file)) for file in files]
     prepare(folder, fresh=fresh)
     place = str(folder / "nightfringe.sqlite")
     with open_logbook(place, create=True) as book:
-        row = find_night(book, str(sequence), None) if book.nights() else None
+        row = find_night(book, sequences, None) if book.nights() else None
         if row is None:
-            row = book_night(book, str(sequence), night=None, seed=seed, hours=None, link=None, unattended=False)
+            row = book_night(
+                book,
+                sequences,
+                night=None,
+                seed=seed,
+                hours=hours,
+                shares=read_shares(shares),
+                link=None,
+                unattended=False,
+            )
         click.echo("starting the stand-in rig", err=True)
         chosen = profile or sequences_folder() / PROFILE
         with (

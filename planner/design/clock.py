@@ -26,7 +26,8 @@ def settle_waits(
             waits = boundary
         else:
             states = table.switches[name][rows]
-            waits = opens | np.r_[True, states[1:] != states[:-1]]
+            last = states[np.maximum.accumulate(np.where(states != 0, np.arange(len(rows)), 0))]  # 0: stands as it did
+            waits = opens | np.r_[True, last[1:] != last[:-1]]
         wait[waits] = np.maximum(wait[waits], switch.settle_s)
     for name, setting in sequence.settings.items():
         if setting.settle_s > 0.0:

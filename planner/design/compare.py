@@ -14,9 +14,10 @@ from planner.sequence.table import ShotTable
 def shuffled_and_swept(table: ShotTable, sequence: Sequence, drifts: Drifts, *, seed: int) -> dict[str, Quality]:
     """Quality of the same shots in a plain shuffle, and in the same sweep again and again; settle waits left out."""
     rng = np.random.default_rng(np.random.SeedSequence(seed, spawn_key=(9,)))
-    sweep = np.lexsort((np.arange(len(table)), table.repeat))
+    count = table.measuring
+    sweep = np.lexsort((np.arange(count), table.repeat[:count]))
     return {
-        "shuffled": _judge(table, sequence, rng.permutation(len(table)), drifts),
+        "shuffled": _judge(table, sequence, rng.permutation(count), drifts),
         "swept": _judge(table, sequence, sweep, drifts),
     }
 
@@ -27,10 +28,12 @@ def _judge(table: ShotTable, sequence: Sequence, rows: IntArray, drifts: Drifts)
     return judge(table, sequence, rows, mid, np.full(len(rows), int(Kind.MEASURE)), drifts)
 
 
-def parity_figures(table: ShotTable, sequence: Sequence, order: RunningOrder) -> dict[str, dict[str, float]]:
+def parity_figures(
+    table: ShotTable, sequence: Sequence, order: RunningOrder, number: int = 0
+) -> dict[str, dict[str, float]]:
     """Added variance of the wanted parity's effects, and of each slow switch's own, which dwells leave to slow drift:
-    {"collar*kick": {"additive_mean", "additive_worst", "coupled_mean", "coupled_worst"}, ...}."""
+    {"collar*kick": {"additive_mean", "additive_worst", "coupled_mean", "coupled_worst"}, ...}; of request `number`."""
     shown = [tuple(sequence.goal.wanted)] if sequence.goal.wanted else []
     shown += [(name,) for name, switch in sequence.switches.items() if switch.slow and (name,) not in shown]
-    quality = quality_of(order, table, sequence)
+    quality = quality_of(order, table, sequence, number)
     return {"*".join(parity): quality.of_parity(parity) for parity in shown}

@@ -100,7 +100,7 @@ def drifts_of(sequence: Sequence, table: ShotTable) -> Drifts:
         PlanImpossible: drift of the acceleration is declared, and nothing to weigh it by (see acceleration.py).
     """
     declared = {drift.kind for drift in sequence.drift}
-    reference = reference_prior(float(table.duration_s.sum()))
+    reference = reference_prior(float(table.duration_s[: table.measuring].sum()))
     return Drifts(
         additive=prior_of(sequence, "additive") if "additive" in declared else reference,
         coupled=prior_of(sequence, "phase", "contrast") if declared & {"phase", "contrast"} else reference,

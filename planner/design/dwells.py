@@ -66,9 +66,7 @@ def _turns(
     shown = np.zeros((int(points.max()) + 1, count))  # packets of each point in each set
     np.add.at(shown, (points, sets), 1.0)
     shown /= np.maximum(np.linalg.norm(shown, axis=1, keepdims=True), 1.0)
-    # products of the slow switches by state: state numbers are their bits, one subset of the bits for each parity
-    bits = np.arange(states)[:, None] & np.arange(1, states)[None, :]
-    products = 1.0 - 2.0 * (np.bitwise_count(bits) % 2)
+    products = products_of(states)
     best, least = np.zeros((count, states), dtype=np.int64), np.inf
     for _ in range(TURNS):
         turns = rng.permuted(np.tile(np.arange(states), (count, 1)), axis=1)
@@ -81,6 +79,13 @@ def _turns(
         if cost < least:
             best, least = turns, cost
     return best
+
+
+def products_of(states: int) -> FloatArray:
+    """Products of the slow switches by state, (n_state, n_state - 1): state numbers are their bits, one subset of the
+    bits for each parity."""
+    bits = np.arange(states)[:, None] & np.arange(1, states)[None, :]
+    return np.asarray(1.0 - 2.0 * (np.bitwise_count(bits) % 2))
 
 
 def _inside(points: IntArray, lengths: FloatArray, states: int, rng: np.random.Generator) -> IntArray:

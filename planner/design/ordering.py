@@ -11,12 +11,12 @@ Times are the rig's: a quarter-second hold and a minute's hold make shot number 
 """
 
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any, Literal
 
 import numpy as np
 
-from planner.arrays import BoolArray, FloatArray, IntArray
+from planner.arrays import BoolArray, FloatArray, IntArray, SignArray
 from planner.design import flips
 from planner.design.arrangements import Patterns, Score, best_arrangements, patterns_of
 from planner.design.choosing import Shape, choose, limits_for
@@ -27,6 +27,7 @@ from planner.design.packets import Packets, find_packets
 from planner.design.quality import Quality, assess
 from planner.design.restricted import RestrictedSet
 from planner.design.running_order import Kind, RunningOrder
+from planner.design.weaving import Lane, alone_on_the_clock
 from planner.errors import InputError, NotEnoughData
 from planner.sequence.model import Sequence
 from planner.sequence.table import ShotTable
@@ -113,16 +114,40 @@ def redraw(
     return allowed.draw(n, rng)
 
 
+def lane_of(table: ShotTable, sequence: Sequence, *, seed: int) -> Lane:
+    """Step 1: packets in a random, spread order, with the times of a night of their own; check shots left out.
+
+    Raises:
+        PlanImpossible: a dwell longer than the measurement, an empty table.
+    """
+    packets = find_packets(table, sequence)
+    layout = lay_out(packets, table, sequence, drifts_of(sequence, table), _streams(seed)[0])
+    return Lane(packets=packets, table=table, sequence=sequence, layout=layout)
+
+
+def _streams(seed: int) -> list[np.random.Generator]:
+    return [np.random.default_rng(np.random.SeedSequence(seed, spawn_key=(k,))) for k in range(4)]
+
+
 def draft_order(
     table: ShotTable, sequence: Sequence, *, seed: int, effort: Effort = "full", progress: Progress | None = None
 ) -> Draft:
     """Steps 1 to 3: everything but the flips of the wanted switch."""
-    streams = [np.random.default_rng(np.random.SeedSequence(seed, spawn_key=(k,))) for k in range(4)]
-    packets = find_packets(table, sequence)
+    lane = lane_of(table, sequence, seed=seed)
+    if len(table) > table.measuring:
+        lane = replace(lane, layout=alone_on_the_clock(lane))
+    total = float(table.duration_s[: table.measuring].sum())
+    return draft_of(lane, total_s=total, seed=seed, effort=effort, progress=progress)
+
+
+def draft_of(
+    lane: Lane, *, total_s: float, seed: int, effort: Effort = "full", progress: Progress | None = None
+) -> Draft:
+    """Steps 2 and 3 for packets that have their times; total_s is the length of the night that they are part of."""
+    table, sequence, packets, layout = lane.table, lane.sequence, lane.packets, lane.layout
+    streams = _streams(seed)
     drifts = drifts_of(sequence, table)
-    layout = lay_out(packets, table, sequence, drifts, streams[0])
     wanted = flips.flipping_switch(sequence)
-    total = float(table.duration_s.sum())
     omega = drifts.omega
     shapes = {
         int(number): _shape(table, sequence, packets, int(number), wanted, drifts, omega, streams[1])
@@ -133,7 +158,7 @@ def draft_order(
     if effort == "quick" or PASSES[effort] == 0:
         choice = np.array([streams[2].integers(len(shapes[int(s)].pool)) for s in packets.shape[ordered]])
     else:
-        grid = period_grid(total)
+        grid = period_grid(total_s)
         n_band = limits_for(len(ordered), max(len(one.patterns.importance) for one in shapes.values()))[1]
         count = min(n_band, len(grid))
         picked = ((np.arange(count) + streams[2].random(count)) * (len(grid) / count)).astype(int)
@@ -159,7 +184,7 @@ def draft_order(
         arrangement=arrangement,
         start_s=start,
         drifts=drifts,
-        total_s=total,
+        total_s=total_s,
     )
 
 
@@ -212,10 +237,24 @@ def _powers(patterns: Patterns, additive: Prior, coupled: Prior, omega: FloatArr
     return np.asarray(np.where(patterns.coupled[:, None], on_grid(coupled), on_grid(additive)))
 
 
-def assemble(
-    draft: Draft, signs: FloatArray, *, seed: int, effort: Effort, allowed: RestrictedSet | None
-) -> RunningOrder:
-    """The running order of a draft with its units flipped by signs (n_unit,)."""
+@dataclass(frozen=True, kw_only=True)
+class Positions:
+    """The shots of a draft with its units flipped, in running order; arrays of shape (n_position,).
+
+    `place`: the packet in running order that a shot is in or comes before; the number of packets behind the last.
+    """
+
+    shot: IntArray
+    kind: IntArray
+    settle_s: FloatArray
+    packet: IntArray
+    unit: IntArray
+    flip: SignArray
+    place: IntArray
+
+
+def positions_of(draft: Draft, signs: FloatArray) -> Positions:
+    """The positions of a draft with its units flipped by signs (n_unit,)."""
     table, sequence, layout = draft.table, draft.sequence, draft.layout
     units = flips.units_of(draft)
     rows, sign = flips.flipped_rows(draft, units, signs)
@@ -224,28 +263,46 @@ def assemble(
     unit = units.of_packet[packet]
     first_of_packet = np.cumsum(sizes) - sizes
     extra = layout.extra
-    at = first_of_packet[extra.before_packet] if len(extra.row) else np.zeros(0, dtype=np.int64)
+    at = np.r_[first_of_packet, len(rows)][extra.before_packet]
     everything = np.insert(rows, at, extra.row)
     kind = np.insert(np.full(len(rows), int(Kind.MEASURE)), at, extra.kind)
     boundary = np.insert(_boundaries(layout, first_of_packet, len(rows)), at, extra.boundary)
+    place = np.insert(packet, at, extra.before_packet)
     packet = np.insert(packet, at, -1)
     opens = np.diff(packet, prepend=-2) != 0
-    settle = settle_waits(table, sequence, everything, boundary, opens)
-    duration = table.duration_s[everything]
-    start = starts(duration, settle)
-    return RunningOrder(
-        request=np.zeros(len(everything), dtype=np.int64),
+    return Positions(
         shot=everything,
         kind=kind,
-        start_s=start,
-        settle_s=settle,
-        duration_s=duration,
+        settle_s=settle_waits(table, sequence, everything, boundary, opens),
         packet=packet,
         unit=np.insert(unit, at, -1),
         flip=np.insert(sign, at, 1).astype(np.int8),
+        place=place,
+    )
+
+
+def assemble(
+    draft: Draft, signs: FloatArray, *, seed: int, effort: Effort, allowed: RestrictedSet | None
+) -> RunningOrder:
+    """The running order of a draft with its units flipped by signs (n_unit,)."""
+    table, sequence = draft.table, draft.sequence
+    found = positions_of(draft, signs)
+    duration = table.duration_s[found.shot]
+    start = starts(duration, found.settle_s)
+    mid = start + found.settle_s + duration / 2
+    return RunningOrder(
+        request=np.zeros(len(found.shot), dtype=np.int64),
+        shot=found.shot,
+        kind=found.kind,
+        start_s=start,
+        settle_s=found.settle_s,
+        duration_s=duration,
+        packet=found.packet,
+        unit=found.unit,
+        flip=found.flip,
         seed=seed,
-        figures=judge(table, sequence, everything, start + settle + duration / 2, kind, draft.drifts).figures(),
-        notes={"effort": effort, **_notes(allowed, units)},
+        figures=judge(table, sequence, found.shot, mid, found.kind, draft.drifts).figures(),
+        notes={"effort": effort, **draw_notes(allowed, flips.units_of(draft))},
     )
 
 
@@ -256,7 +313,8 @@ def _boundaries(layout: Layout, first_of_packet: IntArray, n: int) -> BoolArray:
     return boundary
 
 
-def _notes(allowed: RestrictedSet | None, units: "flips.Units") -> dict[str, Any]:
+def draw_notes(allowed: RestrictedSet | None, units: "flips.Units") -> dict[str, Any]:
+    """What the last draw was made of, for the record: switch, units, size of the set, bars."""
     notes: dict[str, Any] = {"flipped_switch": units.switch, "units": units.count}
     if allowed is not None:
         notes["log2_members"] = round(allowed.log2_size, 2)
@@ -266,10 +324,11 @@ def _notes(allowed: RestrictedSet | None, units: "flips.Units") -> dict[str, Any
     return notes
 
 
-def quality_of(order: RunningOrder, table: ShotTable, sequence: Sequence) -> Quality:
-    """The quality of an order of one sequence, effect by effect."""
-    mid = order.start_s + order.settle_s + order.duration_s / 2
-    return judge(table, sequence, order.shot, mid, order.kind, drifts_of(sequence, table))
+def quality_of(order: RunningOrder, table: ShotTable, sequence: Sequence, number: int = 0) -> Quality:
+    """The quality of an order for the sequence of its request `number`, effect by effect."""
+    mine = order.request == number
+    mid = (order.start_s + order.settle_s + order.duration_s / 2)[mine]
+    return judge(table, sequence, order.shot[mine], mid, order.kind[mine], drifts_of(sequence, table))
 
 
 def judge(

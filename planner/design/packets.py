@@ -37,16 +37,17 @@ class Packets:
 
 
 def find_packets(table: ShotTable, sequence: Sequence) -> Packets:
-    """The packets of a table whose packets are runs of neighbouring rows."""
-    first = np.flatnonzero(np.diff(table.packet, prepend=table.packet[0] - 1))
-    size = np.diff(np.r_[first, len(table)])
+    """The packets of a table whose packets are runs of neighbouring rows; check shots are in none."""
+    measuring = table.measuring
+    first = np.flatnonzero(np.diff(table.packet[:measuring], prepend=-1))
+    size = np.diff(np.r_[first, measuring])
     readout = sequence.roles["readout"]
     columns = [np.round(values[first], 15) for name, values in table.settings.items() if name != readout]
     point = number_rows(np.column_stack([np.zeros(len(first)), *columns]))
     slow_names = [name for name, switch in sequence.switches.items() if switch.slow]
     slow = number_rows(np.column_stack([np.zeros(len(first)), *(-table.switches[name][first] for name in slow_names)]))
     shape, shape_rows = _shapes(table, sequence, first, size, point)
-    total = np.add.reduceat(table.duration_s, first)
+    total = np.add.reduceat(table.duration_s[:measuring], first) if len(first) else np.zeros(0)
     return Packets(
         first=first, size=size, point=point, slow=slow, shape=shape, shape_rows=shape_rows, cycle_s=total / size
     )
@@ -61,11 +62,12 @@ def _shapes(
     table: ShotTable, sequence: Sequence, first: IntArray, size: IntArray, point: IntArray
 ) -> tuple[IntArray, IntArray]:
     """Packets of one point are alike unless their phases or fast switches differ: told apart by sums over the rows."""
-    weight = np.sin(1.0 + np.arange(size.max()))[np.arange(len(table)) - np.repeat(first, size)]
-    marks = [np.add.reduceat(weight * table.phase_rad, first)]
+    measuring = int(size.sum())
+    weight = np.sin(1.0 + np.arange(size.max(initial=0)))[np.arange(measuring) - np.repeat(first, size)]
+    marks = [np.add.reduceat(weight * table.phase_rad[:measuring], first)]
     for name, switch in sequence.switches.items():
         if not switch.slow:
-            marks.append(np.add.reduceat(weight * table.switches[name], first))
+            marks.append(np.add.reduceat(weight * table.switches[name][:measuring], first))
     keys = np.column_stack([point, size, *(np.round(mark, 9) for mark in marks)])
     _, where, shape = np.unique(keys, axis=0, return_index=True, return_inverse=True)
     return shape.reshape(-1).astype(np.int64), first[where]

@@ -11,14 +11,13 @@ of what was measured, and an exact randomisation test draws from both: the group
 the groups of its parts, each as it was drawn.
 """
 
-from collections.abc import Mapping
-from dataclasses import dataclass, fields, replace
-from typing import Any
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from planner.arrays import BoolArray, FloatArray, IntArray
 from planner.design.drift import drifts_of
+from planner.design.fitting import one_of_each_s, packets_that_fit, part_of
 from planner.design.ordering import Effort, judge, make_order
 from planner.design.packets import Packets, find_packets
 from planner.design.quality import Quality
@@ -29,7 +28,6 @@ from planner.sequence.table import ShotTable
 
 STANDS = 0.75  # share of its shots with which a packet stands; below, it is run again whole
 LEAST_PHASES = 3  # readout phases without which it has no fringe, and does not stand
-STEPS = 40  # of the bisection for how much fits
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -86,7 +84,8 @@ def replan(
         PlanImpossible: nothing is left to do, or not even one packet of each point fits.
     """
     packets = find_packets(table, sequence)
-    owner = np.repeat(np.arange(len(packets)), packets.size)
+    owner = np.full(len(table), -1, dtype=np.int64)
+    owner[: table.measuring] = np.repeat(np.arange(len(packets)), packets.size)
     stands, begun = _standing(table, packets, owner, past.row)
     if stands.all():
         raise PlanImpossible("every packet of the night has run: there is nothing left to order")
@@ -95,11 +94,11 @@ def replan(
     room_s = until_s - now_s
     for_packets = room_s
     while True:
-        chosen = _chosen(packets, stands, place, for_packets)
+        chosen = packets_that_fit(packets, stands, place, for_packets)
         if not chosen.any():
             raise PlanImpossible(
                 f"{max(room_s, 0.0) / 60:.0f} min are left, and one packet of every point takes "
-                f"{_one_of_each(packets) / 60:.0f} min and more: end the night, or give it more hours"
+                f"{one_of_each_s(packets) / 60:.0f} min and more: end the night, or give it more hours"
             )
         part, rows = part_of(table, np.flatnonzero(chosen), sequence)
         order = make_order(part, sequence, seed=seed, effort=effort)
@@ -138,22 +137,6 @@ def replan(
     )
 
 
-def part_of(table: ShotTable, packets: IntArray, sequence: Sequence) -> tuple[ShotTable, IntArray]:
-    """The shots of some packets as a table of their own, and the rows that they have in the whole one.
-
-    Args:
-        packets: numbers of packets along the table, rising.
-    """
-    found = find_packets(table, sequence)
-    rows = np.concatenate([np.arange(found.first[p], found.first[p] + found.size[p]) for p in packets])
-    columns: dict[str, Any] = {}
-    for field in fields(table):
-        whole = getattr(table, field.name)
-        several = isinstance(whole, Mapping)
-        columns[field.name] = {name: one[rows] for name, one in whole.items()} if several else whole[rows]
-    return ShotTable(**columns), rows
-
-
 def drawn_part(tail: RunningOrder, table: ShotTable, sequence: Sequence) -> tuple[RunningOrder, ShotTable]:
     """A replanned tail as an order of its own table again: what `randomisation_group` and `redraw` take."""
     part, rows = part_of(table, np.asarray(tail.notes["packets"], dtype=np.int64), sequence)
@@ -175,10 +158,11 @@ def _standing(table: ShotTable, packets: Packets, owner: IntArray, done: IntArra
     """Which packets stand as they are, and which have begun, (n_packet,) each."""
     ran = np.zeros(len(table), dtype=np.bool_)
     ran[done] = True
-    count = np.bincount(owner, weights=ran, minlength=len(packets))
+    count = np.bincount(owner[owner >= 0], weights=ran[owner >= 0], minlength=len(packets))
     # distinct phases among the shots that ran: a packet without three has no fringe, unless it was never to have one
     phase = np.round(table.phase_rad / (2 * np.pi) * 3600).astype(np.int64) % 3600
-    planned = _distinct(owner, phase, len(packets))
+    ran &= owner >= 0
+    planned = _distinct(owner[owner >= 0], phase[owner >= 0], len(packets))
     found = _distinct(owner[ran], phase[ran], len(packets))
     stands = (count >= STANDS * packets.size) & (found >= np.minimum(planned, LEAST_PHASES))
     return stands, count > 0
@@ -187,53 +171,6 @@ def _standing(table: ShotTable, packets: Packets, owner: IntArray, done: IntArra
 def _distinct(owner: IntArray, value: IntArray, count: int) -> IntArray:
     pairs = np.unique(np.stack([owner, value]), axis=1)
     return np.bincount(pairs[0], minlength=count)
-
-
-def _chosen(packets: Packets, stands: BoolArray, place: IntArray, room_s: float) -> BoolArray:
-    """Which packets come, (n_packet,): of every point as many as keep the night balanced and fit into room_s.
-
-    Every point aims at the same share of its plan, done and to come; each state of the slow switches has as many to
-    come as any other, since their dwells come in sets.
-    """
-    cell = packets.point * (int(packets.slow.max()) + 1) + packets.slow
-    cells = np.unique(cell)
-    planned = {int(c): int((cell == c).sum()) for c in cells}
-    done = {int(c): int(((cell == c) & stands).sum()) for c in cells}
-    length = packets.cycle_s * packets.size
-
-    def wanted(part: float) -> dict[int, int]:
-        out = {}
-        for point in np.unique(packets.point):
-            mine = [int(c) for c in cells if (packets.point[cell == c] == point).all()]
-            need = max(int(np.floor(part * planned[c] + 1e-9)) - done[c] for c in mine)
-            most = min(planned[c] - done[c] for c in mine)
-            out.update(dict.fromkeys(mine, max(0, min(need, most))))
-        return out
-
-    def time_of(counts: dict[int, int]) -> float:
-        return float(sum(counts[int(c)] * length[cell == c].mean() for c in cells))
-
-    low, high = 0.0, 1.0
-    if time_of(wanted(1.0)) <= room_s:
-        low = 1.0
-    else:
-        for _ in range(STEPS):
-            middle = (low + high) / 2
-            if time_of(wanted(middle)) <= room_s:
-                low = middle
-            else:
-                high = middle
-    counts = wanted(low)
-    chosen = np.zeros(len(packets), dtype=np.bool_)
-    for c in cells:
-        free = np.flatnonzero((cell == c) & ~stands)
-        chosen[free[np.argsort(place[free], kind="stable")][: counts[int(c)]]] = True
-    return chosen
-
-
-def _one_of_each(packets: Packets) -> float:
-    _, first = np.unique(np.stack([packets.point, packets.slow]), axis=1, return_index=True)
-    return float((packets.cycle_s * packets.size)[first].sum())
 
 
 def _judged(

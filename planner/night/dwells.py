@@ -53,11 +53,13 @@ class Dwells:
 
     def _look_up(self, position: int) -> dict[str, tuple[int, int | None]]:
         found: dict[str, tuple[int, int | None]] = {}
-        if position == 0:
-            return found
-        for name, sign in self._slow(position - 1).items():
+        for name in self._maker.slow_switches():
             before = self._maker.signs_along(name)[:position]
-            changes = np.flatnonzero(before != sign)
-            first = int(changes[-1]) + 1 if len(changes) else 0
-            found[name] = (sign, self._driving.first_start_us(self._night_id, first))
+            said = np.flatnonzero(before)  # shots that say nothing of it leave it as it stands
+            if not len(said):
+                continue
+            sign = int(before[said[-1]])
+            changes = np.flatnonzero(before == -sign)
+            after = said[said > changes[-1]] if len(changes) else said
+            found[name] = (sign, self._driving.first_start_us(self._night_id, int(after[0])))
         return found

@@ -1,22 +1,27 @@
-"""Booking a night: from a sequence file to a stored order within the rig's limits."""
+"""Booking a night: from sequence files to a stored order within the rig's limits."""
 
-from collections.abc import Callable
-from dataclasses import dataclass
+from collections.abc import Callable, Iterator, Mapping, Sequence
+from dataclasses import dataclass, replace
 from datetime import UTC, datetime
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
+import numpy as np
+
+from planner.arrays import FloatArray
 from planner.design.running_order import RunningOrder
 from planner.errors import InputError, PlanImpossible
 from planner.logbook.book import Logbook, NightRow
 from planner.logbook.booking import NewNight, NewRequest
-from planner.sequence.compiler import compile_sequence
-from planner.sequence.limits import check_order_limits
-from planner.sequence.model import Sequence
-from planner.sequence.reader import read_sequence
+from planner.sequence.compiler import Compiled, compile_sequence
+from planner.sequence.limits import check_night_limits
+from planner.sequence.model import Rig
+from planner.sequence.model import Sequence as SequenceFile
+from planner.sequence.reader import MOST_SHOTS, read_sequence
 from planner.sequence.rigfile import read_rig, rig_path
 
 if TYPE_CHECKING:
+    from planner.design.merging import Part
     from planner.design.ordering import Effort
 
 ROOM = 1.1  # a window is so much longer than its order: settle waits after a break, repeats of missed shots
@@ -33,13 +38,101 @@ class Booked:
     approval: str | None
 
 
+@dataclass(frozen=True, kw_only=True)
+class Planned:
+    """A night that could be booked: its requests, in order, and the order of its shots.
+
+    compiled: of each request; parts: what of it runs.
+    """
+
+    rig: Rig
+    compiled: tuple[Compiled, ...]
+    parts: "tuple[Part, ...]"
+    order: RunningOrder
+
+    @property
+    def notes(self) -> tuple[str, ...]:
+        """Sentences for people, each named after its request where there are several."""
+        several = len(self.parts) > 1
+        return tuple(
+            f"{part.sequence.title}: {note}" if several else note
+            for part, compiled in zip(self.parts, self.compiled, strict=True)
+            for note in compiled.notes
+        )
+
+
+def plan_night(
+    files: Sequence[str | Path],
+    *,
+    seed: int,
+    shares: Sequence[float] = (),
+    hours: float | None = None,
+    effort: "Effort" = "full",
+    progress: Callable[[str, float], None] | None = None,
+) -> Planned:
+    """Read, compile, share out, order and check a night of one or several sequences.
+
+    Args:
+        shares: of the night's hours, one for each file; without them each sequence runs as often as it says.
+
+    Raises:
+        ProblemsFound: a sequence or rig file has problems, or the order is beyond the rig's limits.
+        PlanImpossible: what is asked for does not fit.
+        InputError: shares without hours or that contradict each other, files of different rigs, or sequences that
+            contradict each other.
+    """
+    from planner.design.merging import Part, check_together, order_night
+    from planner.design.sharing import check_shares, share_night
+
+    sequences = [read_sequence(file) for file in files]
+    rigs = [read_rig(rig_path(str(file), sequence.rig)) for file, sequence in zip(files, sequences, strict=True)]
+    for file, rig in zip(files, rigs, strict=True):
+        if rig.text != rigs[0].text:
+            raise InputError(
+                f"{file} is for the rig file {rig.file}, {files[0]} for {rigs[0].file}: one night, one rig"
+            )
+    titles = [sequence.title for sequence in sequences]
+    if len(set(titles)) < len(titles):
+        raise InputError("two sequences of one night have one title: give each its own, to tell their results apart")
+    check_together(sequences)
+    if shares:
+        check_shares(shares, len(files))
+        if hours is None:
+            raise InputError("shares are of the night: say how long it is with --hours")
+        sequences = [_filling(one, rig, share * hours) for one, rig, share in zip(sequences, rigs, shares, strict=True)]
+    compiled = [compile_sequence(sequence, rig) for sequence, rig in zip(sequences, rigs, strict=True)]
+    parts = [Part(table=one.with_checks, sequence=own) for one, own in zip(compiled, sequences, strict=True)]
+    if shares and hours is not None:
+        parts, order = share_night(parts, shares, hours=hours, seed=seed, effort=effort, progress=progress)
+    else:
+        order = order_night(parts, seed=seed, effort=effort, progress=progress)
+    check_night_limits(
+        [(part.table, one.timelines) for part, one in zip(parts, compiled, strict=True)],
+        rigs[0],
+        order.request,
+        order.start_s,
+        order.shot,
+        settle_s=order.settle_s,
+    )
+    return Planned(rig=rigs[0], compiled=tuple(compiled), parts=tuple(parts), order=order)
+
+
+def _filling(sequence: SequenceFile, rig: Rig, hours: float) -> SequenceFile:
+    """The sequence with repeats enough for so many hours; what its file says of repeats does not count."""
+    one = compile_sequence(replace(sequence, fringe=replace(sequence.fringe, repeats=1)), rig).table
+    repeats = int(hours * 3600.0 / float(one.duration_s.sum())) + 2
+    if repeats * len(one) > MOST_SHOTS:
+        raise InputError(f'"{sequence.title}": {hours:g} h hold over {MOST_SHOTS:,} shots: give it a smaller share')
+    return replace(sequence, fringe=replace(sequence.fringe, repeats=repeats))
+
+
 def book_sequence(
     book: Logbook,
-    file: str | Path,
-    *,
+    *files: str | Path,
     now_us: int,
     who: str,
     seed: int,
+    shares: Sequence[float] = (),
     name: str | None = None,
     hours: float | None = None,
     link: str | None = None,
@@ -47,9 +140,10 @@ def book_sequence(
     effort: "Effort" = "full",
     progress: Callable[[str, float], None] | None = None,
 ) -> Booked:
-    """Read, compile, order, check and store a night of one sequence.
+    """Read, compile, order, check and store a night of one or several sequences.
 
     Args:
+        shares: as plan_night takes them.
         hours: length of the night's window; without it, the order's own length and a tenth more.
         link: address of the rig link in place of the rig file's.
         effort, progress: as make_order takes them.
@@ -57,49 +151,56 @@ def book_sequence(
     Raises:
         ProblemsFound: the sequence or rig file has problems, or the order is beyond the rig's limits.
         PlanImpossible: the order is longer than the window.
-        InputError: unattended, and the rig file records no approval.
+        InputError: unattended, and the rig file records no approval; and as plan_night.
     """
-    from planner.design.ordering import make_order
-
-    sequence = read_sequence(file)
-    rig = read_rig(rig_path(str(file), sequence.rig))
+    sequence = read_sequence(files[0])
+    rig = read_rig(rig_path(str(files[0]), sequence.rig))
     if unattended and rig.approval is None:
         raise InputError(
             f'{rig.file}: an unattended night needs the reference of its approval: write approval = "..." there once '
             "the person responsible for the room has given it"
         )
-    compiled = compile_sequence(sequence, rig)
-    order = make_order(compiled.table, sequence, seed=seed, effort=effort, progress=progress)
-    check_order_limits(compiled, rig, order.start_s, order.shot, settle_s=order.settle_s)
-    order_s = length_of(order)
+    planned = plan_night(files, seed=seed, shares=shares, hours=hours, effort=effort, progress=progress)
+    order_s = length_of(planned.order)
     window_s = order_s * ROOM + SHORT_ROOM_S if hours is None else hours * 3600.0
     if order_s > window_s:
         raise PlanImpossible(
-            f"the order takes {order_s / 3600:.2f} h, the night has {window_s / 3600:.2f} h: give it more hours, or "
-            "lower the repeats in the sequence file"
+            f"the order takes {order_s / 3600:.2f} h, the night has {window_s / 3600:.2f} h: give it more hours, "
+            "lower the repeats in the sequence file, or give shares (--share) that it is to be cut to"
         )
+    given = shares or [float(time / order_s) for time in _rig_s(planned.order, len(planned.parts))]
     new = NewNight(
-        name=name or free_name(book, Path(file).stem, now_us),
+        name=name or free_name(book, "+".join(Path(file).stem for file in files), now_us),
         rig=rig.name,
         rig_text=rig.text,
         link=link or rig.link,
         length_s=window_s,
         requests=[
             NewRequest(
-                title=sequence.title,
-                sequence_text=sequence.text,
-                table=compiled.table,
-                timelines=(compiled.timelines.document(i) for i in range(len(compiled.timelines))),
-                goal=sequence.goal.kind,
+                title=part.sequence.title,
+                sequence_text=part.sequence.text,
+                table=part.table,
+                timelines=_documents(compiled),
+                goal=part.sequence.goal.kind,
                 seed=seed,
-                details=details_of(sequence),
+                share=share,
+                details=details_of(part.sequence),
             )
+            for part, compiled, share in zip(planned.parts, planned.compiled, given, strict=True)
         ],
-        order=order,
+        order=planned.order,
         unattended=rig.approval if unattended else None,
     )
     night = book.book_night(new, now_us=now_us, who=who)
-    return Booked(night=night, order_s=order_s, notes=compiled.notes, approval=rig.approval)
+    return Booked(night=night, order_s=order_s, notes=planned.notes, approval=rig.approval)
+
+
+def _documents(compiled: Compiled) -> Iterator[Mapping[str, Any]]:
+    return (compiled.timelines.document(i) for i in range(len(compiled.timelines)))
+
+
+def _rig_s(order: RunningOrder, requests: int) -> FloatArray:
+    return np.asarray(np.bincount(order.request, weights=order.settle_s + order.duration_s, minlength=requests), float)
 
 
 def length_of(order: RunningOrder) -> float:
@@ -107,7 +208,7 @@ def length_of(order: RunningOrder) -> float:
     return float(order.start_s[-1] + order.settle_s[-1] + order.duration_s[-1])
 
 
-def details_of(sequence: Sequence) -> dict[str, Any]:
+def details_of(sequence: SequenceFile) -> dict[str, Any]:
     """What sending a shot needs besides the shot table: units, states, waits."""
     return {
         "settings": {

@@ -55,7 +55,8 @@ def replacement_order(plan: NightPlan, missed: IntArray, *, seed: int) -> Runnin
     """
     order = plan.order.columns
     slow = [_slow_states(plan, int(position)) for position in missed]
-    last = _slow_states(plan, len(plan.order) - 1)
+    measured = np.flatnonzero(~np.isin(order["kind"], ONCE))
+    last = _slow_states(plan, int(measured[-1]))
     groups = sorted(set(slow), key=lambda state: (state != last, state))
     rows = np.array([p for group in groups for p, state in zip(missed, slow, strict=True) if state == group])
     states = [_slow_states(plan, int(position)) for position in rows]

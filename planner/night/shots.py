@@ -69,26 +69,28 @@ class ShotMaker:
         return float(self._remaining_s[position]) if position < len(self) else 0.0
 
     def states(self, position: int) -> dict[str, str]:
-        """The switch states of a position."""
-        request, row = self.request(position), self.shot(position)
-        return {
-            name: request.details["switches"][name]["states"][0 if signs[row] > 0 else 1]
-            for name, signs in request.table.switches.items()
-        }
+        """The switch states of a position; a switch that stands as it does, for a check shot, is left out."""
+        states = self.request(position).details["switches"]
+        return {name: states[name]["states"][0 if sign > 0 else 1] for name, sign in self.signs(position).items()}
 
     def signs(self, position: int) -> dict[str, int]:
         """The same as +1 (first state) or -1."""
         request, row = self.request(position), self.shot(position)
-        return {name: int(signs[row]) for name, signs in request.table.switches.items()}
+        return {name: int(signs[row]) for name, signs in request.table.switches.items() if signs[row]}
 
     def signs_along(self, switch: str) -> SignArray:
-        """+1 or -1 of one switch at every position, 0 where its request has no such switch; (n_position,)."""
+        """+1 or -1 of one switch at every position, 0 where nothing is said of it; (n_position,)."""
         along = np.zeros(len(self), dtype=np.int8)
         for request in self._plan.requests:
             if switch in request.table.switches:
                 here = self._order["request"] == request.number
                 along[here] = request.table.switches[switch][self._order["shot"][here]]
         return along
+
+    def slow_switches(self) -> list[str]:
+        """Names of the switches with a dwell, of all requests."""
+        details = [request.details["switches"] for request in self._plan.requests]
+        return list(dict.fromkeys(name for one in details for name, switch in one.items() if switch["dwell_s"] > 0))
 
     def dwell_s(self, position: int, switch: str) -> float:
         """The shortest time that a switch stays put."""

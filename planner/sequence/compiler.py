@@ -17,7 +17,7 @@ from planner.quantities import format_quantity
 from planner.sequence.against_rig import check_against_rig
 from planner.sequence.model import Check, Rig, Sequence
 from planner.sequence.shot_checks import Rounding, ShotChecks
-from planner.sequence.table import ShotTable
+from planner.sequence.table import ShotTable, joined
 from planner.sequence.timeline import TimelineSet
 
 if TYPE_CHECKING:
@@ -32,14 +32,19 @@ class Compiled:
     """A compiled sequence.
 
     `notes` are sentences for people: rounding, length of the night. `checks` holds one small table for each kind of
-    check shot, by name: cell and packet are -1, and a switch column is 0, which leaves the switch as it stands. Check
-    shots play the last timelines of the set.
+    check shot, by name: cell is -1 for the first kind, -2 for the second and so on, packet is -1, and a switch column
+    is 0, which leaves the switch as it stands. Check shots play the last timelines of the set.
     """
 
     table: ShotTable
     timelines: TimelineSet
     notes: tuple[str, ...]
     checks: Mapping[str, ShotTable] = field(default_factory=dict)
+
+    @property
+    def with_checks(self) -> ShotTable:
+        """The table with the check shots as its last rows: what a night is ordered and booked from."""
+        return joined([self.table, *self.checks.values()]) if self.checks else self.table
 
 
 def compile_sequence(sequence: Sequence, rig: Rig) -> Compiled:
@@ -78,7 +83,7 @@ def compile_sequence(sequence: Sequence, rig: Rig) -> Compiled:
         timelines=timelines,
         notes=_notes(sequence, table, checks.rounding),
         checks={
-            check.name: _check_table(sequence, timelines, check, first_check + number)
+            check.name: _check_table(sequence, timelines, check, number, first_check + number)
             for number, check in enumerate(sequence.checks)
         },
     )
@@ -204,22 +209,21 @@ def _table(sequence: Sequence, timelines: TimelineSet, template: _Template, code
     )
 
 
-def _check_table(sequence: Sequence, timelines: TimelineSet, check: Check, timeline: int) -> ShotTable:
+def _check_table(sequence: Sequence, timelines: TimelineSet, check: Check, number: int, timeline: int) -> ShotTable:
     count = check.shots
     settings = {
         name: np.full(count, check.settings.get(name, setting.rest)) for name, setting in sequence.settings.items()
     }
     readout = settings[sequence.roles["readout"]]
     plays = np.full(count, timeline, dtype=np.int64)
-    outside = np.full(count, -1, dtype=np.int64)
     return ShotTable(
         settings=settings,
         switches={name: np.zeros(count, dtype=np.int8) for name in sequence.switches},
         hold_s=settings[sequence.roles["hold"]],
         phase_rad=np.mod(readout, 2 * np.pi),
         duration_s=_durations(timelines, plays),
-        cell=outside,
-        packet=outside,
+        cell=np.full(count, -1 - number, dtype=np.int64),
+        packet=np.full(count, -1, dtype=np.int64),
         repeat=np.arange(count),
         timeline=plays,
     )

@@ -4,7 +4,7 @@ The order is walked in pieces, so memory does not grow with its length. Within a
 is taken as its mean level, which is wrong by less than one ramp's load.
 """
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -14,6 +14,8 @@ from planner.errors import LimitExceeded
 from planner.quantities import format_quantity, unit
 from planner.sequence.compiler import Compiled
 from planner.sequence.model import Line, Rig
+from planner.sequence.table import ShotTable
+from planner.sequence.timeline import TimelineSet
 
 HOUR_S = 3600.0
 PIECE = 16_384  # positions looked at together
@@ -33,38 +35,63 @@ class _Limit:
 def check_order_limits(
     compiled: Compiled, rig: Rig, start_s: FloatArray, shot: IntArray, *, settle_s: FloatArray | None = None
 ) -> None:
+    """Check duty and load of every line over a running order of one sequence: as `check_night_limits`."""
+    request = np.zeros(len(shot), dtype=np.int64)
+    check_night_limits([(compiled.with_checks, compiled.timelines)], rig, request, start_s, shot, settle_s=settle_s)
+
+
+def check_night_limits(
+    requests: Sequence[tuple[ShotTable, TimelineSet]],
+    rig: Rig,
+    request: IntArray,
+    start_s: FloatArray,
+    shot: IntArray,
+    *,
+    settle_s: FloatArray | None = None,
+) -> None:
     """Check duty and load of every line over a running order.
 
     Args:
-        compiled: the sequence's shots.
+        requests: shots and timelines of every request of the night.
         rig: its limits.
+        request: which request each position belongs to, shape (n_position,).
         start_s: when each position starts, ascending, shape (n_position,), s.
-        shot: the row of the shot table that each position runs, shape (n_position,).
+        shot: the row of its request's shot table that each position runs, shape (n_position,).
         settle_s: wait before the timeline plays, counted within the position; zero if None.
 
     Raises:
         LimitExceeded: names the position, the shot, the line, what was found and what is allowed.
     """
-    limits = list(_limits(rig, compiled.timelines.lines))
+    driven = tuple(dict.fromkeys(name for _, timelines in requests for name in timelines.lines))
+    limits = list(_limits(rig, driven))
     if not limits or len(shot) == 0:
         return
     plays = start_s if settle_s is None else start_s + settle_s
     walkers = {limit: _Walker(limit) for limit in limits}
     for first in range(0, len(shot), PIECE):
-        piece = slice(first, first + PIECE)
-        distinct, which = np.unique(compiled.table.timeline[shot[piece]], return_inverse=True)
-        edges = compiled.timelines.edges(distinct)
-        for name in dict.fromkeys(limit.line.name for limit in limits):
-            track = edges.tracks[name]
-            lengths = (track.lengths(edges.ticks) * rig.tick_s).astype(np.float64)
-            offsets = (track.start * rig.tick_s).astype(np.float64)
+        piece = np.arange(first, min(first + PIECE, len(shot)))
+        found: dict[_Limit, list[tuple[FloatArray, FloatArray, FloatArray]]] = {limit: [] for limit in limits}
+        for number, (table, timelines) in enumerate(requests):
+            mine = piece[request[piece] == number]
+            if not len(mine):
+                continue
+            distinct, which = np.unique(table.timeline[shot[mine]], return_inverse=True)
+            edges = timelines.edges(distinct)
             for limit in limits:
-                if limit.line.name != name:
+                if limit.line.name not in timelines.lines:
                     continue
+                track = edges.tracks[limit.line.name]
+                lengths = (track.lengths(edges.ticks) * rig.tick_s).astype(np.float64)
+                offsets = (track.start * rig.tick_s).astype(np.float64)
                 away = np.where(track.away(limit.line), lengths, 0.0)
                 amount = away if limit.kind == "duty" else track.load(limit.line, lengths)
-                starts = (plays[piece, np.newaxis] + offsets.T[which]).reshape(-1)
-                walkers[limit].walk(starts, lengths.T[which].reshape(-1), amount.T[which].reshape(-1), shot, plays)
+                starts = (plays[mine, np.newaxis] + offsets.T[which]).reshape(-1)
+                found[limit].append((starts, lengths.T[which].reshape(-1), amount.T[which].reshape(-1)))
+        for limit, pieces in found.items():
+            if pieces:
+                start, length, load = (np.concatenate(column) for column in zip(*pieces, strict=True))
+                order = np.argsort(start, kind="stable") if len(pieces) > 1 else slice(None)
+                walkers[limit].walk(start[order], length[order], load[order], shot, plays)
 
 
 def _limits(rig: Rig, driven: tuple[str, ...]) -> Iterator[_Limit]:

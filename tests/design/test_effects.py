@@ -11,9 +11,10 @@ from hypothesis import strategies as st
 from scipy.linalg import hadamard
 
 from planner.arrays import FloatArray, IntArray
-from planner.cli.order import write_order
+from planner.cli.order_table import write_order
 from planner.design.drift import Drifts, reference_prior
 from planner.design.effects import effects_of, parities, slope_effect, white_variance
+from planner.design.merging import Part
 from planner.design.ordering import make_order
 from planner.design.quality import assess
 from planner.sequence.model import Sequence
@@ -79,7 +80,7 @@ def test_a_planned_order_scores_as_it_says(tmp_path: Path) -> None:
     table, sequence = night_b(30)
     order = make_order(table, sequence, seed=2, effort="quick")
     path = tmp_path / "order.csv"
-    write_order(order, table, sequence, str(path), measured_only=True)
+    write_order(order, [Part(table=table, sequence=sequence)], str(path), measured_only=True)
     total = float(order.start_s[-1] + order.settle_s[-1] + order.duration_s[-1])
     drift = sequence.drift[0]
     scored = score_order.score(str(path), wander=drift.wander * np.sqrt(total / drift.wander_over_s))

@@ -88,22 +88,22 @@ def test_a_night_goes_on_with_the_texts_it_was_booked_with(folder: Path) -> None
     """The same file takes the open night up; a changed sequence or rig file is refused until the night ends."""
     file = str(folder / "hold-scan.toml")
     with open_logbook(str(folder / "book.sqlite"), create=True) as book:
-        assert find_night(book, file, None) is None
+        assert find_night(book, [file], None) is None
         night = book_it(book, folder).night
-        assert find_night(book, file, None) == night
-        assert find_night(book, None, None) == night
-        assert find_night(book, file, "a new name") is None
+        assert find_night(book, [file], None) == night
+        assert find_night(book, [], None) == night
+        assert find_night(book, [file], "a new name") is None
         rig = folder / "gallery-rig.toml"
         before = rig.read_text(encoding="utf-8")
         rig.write_text(before + "# changed\n", encoding="utf-8")
         with pytest.raises(LogbookConflict, match="has changed since"):
-            find_night(book, file, None)
+            find_night(book, [file], None)
         rig.write_text(before, encoding="utf-8")
-        check_same(book, night, file, named=False)
+        check_same(book, night, [file], named=False)
         (folder / "hold-scan.toml").write_text(
             (folder / "hold-scan.toml").read_text(encoding="utf-8") + "# changed\n", encoding="utf-8"
         )
         with pytest.raises(LogbookConflict, match="another sequence"):
-            find_night(book, file, None)
+            find_night(book, [file], None)
         book.end_night(night.id, now_us=NOW_US, who="test", why="test")
-        assert find_night(book, file, None) is None
+        assert find_night(book, [file], None) is None
