@@ -22,8 +22,8 @@ def command(night: str | None, logbook: str | None, hours_left: float | None, as
     """Order the rest of a night anew: after an outage, lost shots, or with fewer hours.
 
     NIGHT is the name or number of a night that has begun and is not running now; without it, the open one. What has run
-    stays; the rest comes in whole packets, as many as fit, the same for every point, in an order of its own.
-    Only times and losses are looked at, never a result. Go on with: nightfringe run.
+    stays; the rest comes in whole packets, as many as fit, the same for every point of every request, in an order of
+    its own. Only times and losses are looked at, never a result. Go on with: nightfringe run.
     """
     from planner.errors import LogbookConflict
     from planner.logbook import default_place, open_logbook
@@ -36,8 +36,8 @@ def command(night: str | None, logbook: str | None, hours_left: float | None, as
             raise LogbookConflict("no night is open; book one with: nightfringe run FILE")
         found = replan_night(book, row, now_us=now_us(), owner=owner_name(), hours_left=hours_left)
     plan = found.plan
-    whole = plan.whole.figures()
-    unchanged = None if plan.unchanged is None else plan.unchanged.figures()
+    whole = dict(plan.whole)
+    unchanged = None if plan.unchanged is None else dict(plan.unchanged)
     if as_json:
         document = {
             "night": row.name,

@@ -5,6 +5,7 @@ at the times that it has in that night, just as a night of its own would be: arr
 cancel, and a last draw among flips of its own wanted switch. So each request has its own group of an exact test.
 """
 
+from collections.abc import Mapping
 from collections.abc import Sequence as Items
 from dataclasses import dataclass, replace
 from typing import Any
@@ -19,7 +20,9 @@ from planner.design.ordering import (
     Effort,
     Positions,
     Progress,
+    assemble,
     draft_of,
+    draft_order,
     draw_notes,
     judge,
     lane_of,
@@ -60,6 +63,18 @@ def order_night(
     if len(parts) == 1:
         return make_order(parts[0].table, parts[0].sequence, seed=seed, effort=effort, progress=progress)
     check_together([part.sequence for part in parts])
+    return _ordered(parts, seed=seed, effort=effort, progress=progress, drawn=True)
+
+
+def undrawn_night(parts: Items[Part], *, seed: int) -> RunningOrder:
+    """The quick order of a night before its last draw: the layout that order_night with this seed has."""
+    if len(parts) == 1:
+        draft = draft_order(parts[0].table, parts[0].sequence, seed=seed, effort="quick")
+        return assemble(draft, np.ones(flips.units_of(draft).count), seed=seed, effort="quick", allowed=None)
+    return _ordered(parts, seed=seed, effort="quick", progress=None, drawn=False)
+
+
+def _ordered(parts: Items[Part], *, seed: int, effort: Effort, progress: Progress | None, drawn: bool) -> RunningOrder:
     lanes, turns, checks = _woven(parts, seed)
     found, notes, drafts = [], [], []
     for number, lane in enumerate(lanes):
@@ -70,8 +85,10 @@ def order_night(
                 progress(step, first + done / len(lanes))
 
         draft = _drafted(lane, lanes, seed=own, effort=effort, progress=told)
-        told("drawing the flips of the wanted switch", 0.9)
-        allowed = flips.restricted_set(draft, seed=own)
+        allowed = None
+        if drawn:
+            told("drawing the flips of the wanted switch", 0.9)
+            allowed = flips.restricted_set(draft, seed=own)
         rng = np.random.default_rng(np.random.SeedSequence(own, spawn_key=(4,)))
         units = flips.units_of(draft)
         signs = allowed.draw(1, rng)[0] if allowed is not None else np.ones(units.count)
@@ -226,7 +243,7 @@ def _together(
         unit=np.where(unit < 0, -1, unit + first_unit[request]),
         flip=column("flip", 1).astype(np.int8),
         seed=seed,
-        figures=_figures(figures),
+        figures=figures_of_night(figures),
         notes={"effort": effort, "requests": notes},
     )
 
@@ -235,7 +252,8 @@ def _full(like: IntArray, value: int) -> IntArray:
     return np.full(len(like), value, dtype=np.int64)
 
 
-def _figures(of_requests: list[dict[str, float]]) -> dict[str, float]:
+def figures_of_night(of_requests: Items[Mapping[str, float]]) -> dict[str, float]:
+    """Figures of a night from those of its requests: the mean of means, the worst of worst ones and peaks."""
     worst = max(of_requests, key=lambda one: one["any_period_peak"])
     out = {name: float(max(one[name] for one in of_requests)) for name in worst}
     out |= {name: float(np.mean([one[name] for one in of_requests])) for name in MEANS}
