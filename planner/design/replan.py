@@ -65,6 +65,11 @@ class Replanned:
     whole: Mapping[str, float]
     unchanged: Mapping[str, float] | None
 
+    @property
+    def why(self) -> str:
+        """The reason that the revision is stored with."""
+        return f"replanned: {self.to_come} packets to come, {self.dropped} dropped"
+
 
 def replan(
     table: ShotTable,

@@ -33,6 +33,7 @@ from planner.night.reconciling import ask_about, deal_with_strangers
 from planner.night.replacements import append_missed
 from planner.night.reports import fraction_of, outcome_of
 from planner.night.shots import ShotMaker, to_us
+from planner.night.taking_over import TakingOver
 
 LEASE_US = 60_000_000
 ASK_WAIT_S = 2.0  # how long the rig may think about an answer: also how soon a request to stop is noticed
@@ -42,7 +43,7 @@ SECOND_US = 1_000_000
 
 
 class Dispatcher:
-    """Runs one night at one rig. `progress` is called after every shot."""
+    """Runs one night at one rig. `progress` is called after every shot; `replans`: a night that slips is replanned."""
 
     def __init__(
         self,
@@ -53,6 +54,7 @@ class Dispatcher:
         *,
         owner: str,
         progress: Callable[[Progress], None] = lambda _: None,
+        replans: bool = False,
     ) -> None:
         self._book = book
         self._night = night
@@ -66,6 +68,7 @@ class Dispatcher:
         self._description: Description
         self._described = ""
         self._dwells: Dwells
+        self._taking_over = TakingOver(book, night) if replans else None
         self._boot = ""
         self._held: deque[Held] = deque()
         self._seen_running: set[str] = set()
@@ -103,6 +106,8 @@ class Dispatcher:
         return state
 
     def _close(self, state: str, why: str | None) -> None:
+        if self._taking_over is not None:
+            self._taking_over.close()
         with self._step() as step:
             step.set_state(state, why)
             step.audit(f"night_{state}", {"why": why, "next_position": self._next})
@@ -163,6 +168,7 @@ class Dispatcher:
             if self._hands.stopping():
                 self._finish_what_runs()
                 return states.NIGHT_STOPPED, "stopped by hand"
+            self._look_for_slip()
             self._top_up()
             if self._held:
                 self._look_at_head()
@@ -187,6 +193,8 @@ class Dispatcher:
     def _may_send(self) -> bool:
         """Whether there is a next shot, a slot for it, and time in the night's window."""
         if self._hands.stopping() or self._next >= len(self._maker) or len(self._held) >= self._description.slots:
+            return False
+        if self._taking_over is not None and self._taking_over.due(self._next):
             return False
         return self._fits_the_night()
 
@@ -454,6 +462,16 @@ class Dispatcher:
             head.confirmed = True
             self._look_at_head()
         self._acknowledge()
+
+    def _look_for_slip(self) -> None:
+        """A night that has slipped is replanned (taking_over.py)."""
+        if self._taking_over is None or self._next >= len(self._maker):
+            return
+        start_s = (self._start_us() - (self._begins_us or self._free_us)) / SECOND_US
+        if self._taking_over.attend(
+            self._maker, self._next, start_s=start_s, driving=self._driving, step=self._step, contact=self._contact
+        ):
+            self._load()
 
     def _replace_missed(self) -> int:
         """Append the missed shots that still fit the night as a new revision; how many."""

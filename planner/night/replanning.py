@@ -137,11 +137,6 @@ def plan_the_rest(standing: Standing, effort: Effort = "full") -> Replanned:
     )
 
 
-def why_replanned(plan: Replanned) -> str:
-    """The reason that a revision is stored with."""
-    return f"replanned: {plan.to_come} packets to come, {plan.dropped} dropped"
-
-
 def replan_night(
     book: Logbook,
     night: NightRow,
@@ -185,7 +180,7 @@ def replan_night(
         standing = how_it_stands(book, driving, night, from_position=position, now_s=began_s, until_s=until_s)
         plan = plan_the_rest(standing, effort)
         with driving.step(night.id, now_us=now_us) as step:
-            number = step.revise(plan.tail, from_position=position, why=why_replanned(plan))
+            number = step.revise(plan.tail, from_position=position, why=plan.why)
         return NightReplanned(
             revision=number,
             from_position=position,

@@ -41,8 +41,11 @@ def run_night(
     stopping: Callable[[], bool] = lambda: False,
     say: Callable[[str], None] = lambda _: None,
     progress: Callable[[Progress], None] = lambda _: None,
+    replans: bool = True,
 ) -> str:
     """Run a night from where it stands; returns the state it ends in ("done", "over" or "stopped").
+
+    replans: a night that slips, by an outage or otherwise, has its rest ordered anew while it runs.
 
     Raises:
         LogbookConflict: it has ended, was recorded by hand, or another night of this rig is under way.
@@ -59,7 +62,7 @@ def run_night(
                 f"rig: go on with it (nightfringe run --night {other.name}) or end it (the same with --end)"
             )
     hands = real_hands(stopping=stopping, say=say)
-    return Dispatcher(book, night, client, hands, owner=owner_name(), progress=progress).run()
+    return Dispatcher(book, night, client, hands, owner=owner_name(), progress=progress, replans=replans).run()
 
 
 def end_night(book: Logbook, night: NightRow, client: RigClient, *, say: Callable[[str], None]) -> None:

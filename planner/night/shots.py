@@ -64,6 +64,15 @@ class ShotMaker:
         """How long the shot takes with that settle wait."""
         return settle_s + float(self._order["duration_s"][position])
 
+    def planned_s(self, position: int) -> float:
+        """When its cycle begins by the order, settle wait first: s from the night's start."""
+        return float(self._order["start_s"][position])
+
+    def opens_packet(self, position: int) -> bool:
+        """Whether a packet may be left here: the position is in another packet than the one before, or in none."""
+        packet = self._order["packet"]
+        return position == 0 or int(packet[position]) < 0 or int(packet[position]) != int(packet[position - 1])
+
     def remaining_s(self, position: int) -> float:
         """Planned time of the order from `position` on, waits between shots left out."""
         return float(self._remaining_s[position]) if position < len(self) else 0.0

@@ -2,21 +2,26 @@
 
 import json
 from collections.abc import Iterator
+from concurrent.futures import Future
+from datetime import timedelta
 from pathlib import Path
+from typing import cast
 
 import numpy as np
 import pytest
 
 from planner.analysis.data import NightData
 from planner.cli.app import run
+from planner.design.replan import Replanned
 from planner.design.running_order import Kind
-from planner.errors import LogbookConflict
+from planner.errors import LogbookConflict, PlanImpossible
 from planner.link.client import RigClient
 from planner.link.stand_in.process import start_stand_in
-from planner.logbook import Logbook, open_logbook
+from planner.logbook import Logbook, NightRow, open_logbook
 from planner.night.planning import book_sequence
 from planner.night.replanning import replan_night
 from planner.night.running import now_us, run_night
+from planner.night.taking_over import TakingOver
 from planner.resources import sequences_folder
 
 
@@ -88,3 +93,45 @@ def test_nights_that_cannot_be_replanned(stopped: tuple[Logbook, RigClient, str]
     assert run_night(book, book.night(), client) == "done"
     with pytest.raises(LogbookConflict, match="only a night that is open"):
         replan_night(book, book.night(), now_us=now_us(), owner="test")
+
+
+def test_a_night_that_slips_is_replanned_by_itself(stopped: tuple[Logbook, RigClient, str]) -> None:
+    """After twenty minutes in which nothing ran, what is left no longer fits: the dispatcher orders it anew, whole
+    packets of every hold alike, and the night ends within its window."""
+    book, client, _ = stopped
+    night = book.night()
+    client.move_clock(client.now().now + timedelta(minutes=20))
+    said: list[str] = []
+    assert run_night(book, night, client, say=said.append) == "done"
+    assert any("the night has slipped" in words for words in said)
+    second = book.revisions(1)[1]
+    assert second.why.startswith("replanned: ")
+    data = NightData.from_columns(book.night_columns(1))
+    assert np.nanmax(data.start_s + data.duration_s) <= night.length_s
+    later = (data.position >= second.from_position) & (data.kind == int(Kind.MEASURE))
+    counts = np.bincount(data.packet[later] - data.packet[later].min())
+    assert (counts[counts > 0] >= 8).all(), "whole packets: eight shots, more where one was lost and came again"
+
+
+def test_a_night_that_keeps_its_time_is_left_alone(stopped: tuple[Logbook, RigClient, str]) -> None:
+    book, client, _ = stopped
+    client.move_clock(client.now().now + timedelta(minutes=1))
+    assert run_night(book, book.night(), client) == "done"
+    assert not any(row.why.startswith("replanned") for row in book.revisions(1))
+
+
+def test_on_a_real_clock_dispatching_does_not_wait() -> None:
+    """A new order that is late is left, the old one goes on, and the next look is further ahead."""
+    taking = TakingOver(cast(Logbook, None), cast(NightRow, None))
+    late: Future[Replanned] = Future()
+    taking._waiting = (7, late)
+    assert not taking.due(6)
+    assert taking.due(7)
+    ahead = taking._ahead_s
+    assert "not ready in time" in str(taking._take(wait=False))
+    assert not taking.due(7)
+    assert taking._ahead_s == 2 * ahead
+    failed: Future[Replanned] = Future()
+    failed.set_exception(PlanImpossible("nothing fits"))
+    taking._waiting = (7, failed)
+    assert taking._take(wait=False) == "not replanned: nothing fits"
