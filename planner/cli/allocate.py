@@ -7,6 +7,7 @@ import click
 
 if TYPE_CHECKING:
     from planner.design.allocation.result import Allocation
+    from planner.sequence.model import Sequence
 
 HOURS = 10.0  # where neither the sequence nor the command says how long the night is
 
@@ -20,8 +21,11 @@ HOURS = 10.0  # where neither the sequence nor the command says how long the nig
     help="what the night is for [default: the sequence's goal]",
 )
 @click.option("--best-guess", is_flag=True, help="take what is known of the rig as certain")
+@click.option("--write", type=click.Path(), help="write FILE anew to this place with these holds and packets")
 @click.option("--json", "as_json", is_flag=True, help="print one JSON object")
-def command(file: str, hours: float | None, goal: str | None, best_guess: bool, as_json: bool) -> None:
+def command(
+    file: str, hours: float | None, goal: str | None, best_guess: bool, write: str | None, as_json: bool
+) -> None:
     """Share out rig time for a goal: holds and packets, proved.
 
     Rig time is the cost: a shot held for a minute costs as much as twenty short ones. What is known of the rig comes
@@ -38,10 +42,34 @@ def command(file: str, hours: float | None, goal: str | None, best_guess: bool, 
     dead_s = float((table.duration_s - table.hold_s).mean())
     night = hours if hours is not None else (sequence.goal.hours or HOURS)
     found = allocate(sequence, rig, dead_s, hours=night, goal=goal, robust=not best_guess)
+    packets = None if write is None else _write(write, sequence, found, dead_s)
     if as_json:
-        click.echo(json.dumps(document(found)))
+        click.echo(json.dumps({**document(found), "written": write, "packets_written": packets}))
     else:
         _show(sequence.title, found)
+        if packets is not None:
+            total = sum(packets.values())
+            click.echo(f"written: {write}: {len(packets)} hold(s), {total:,} packets of full fringes in every state")
+
+
+def _write(place: str, sequence: "Sequence", found: "Allocation", dead_s: float) -> dict[float, int]:
+    """Write the sequence with the holds and packets of an allocation; returns them."""
+    from pathlib import Path
+
+    from planner.design.allocation.packets import packets_for
+    from planner.errors import InputError
+    from planner.sequence.rewrite import with_holds
+
+    path = Path(place)
+    if path.exists():
+        raise InputError(f'"{place}" is there already: give --write another name; nothing was written')
+    packets = packets_for(found, sequence, dead_s)
+    text = with_holds(sequence, packets, f"allocated for {found.goal}, {found.hours:g} h")
+    try:
+        path.write_text(text, encoding="utf-8")
+    except OSError as wrong:
+        raise InputError(f'"{place}" cannot be written: {wrong.strerror}') from wrong
+    return packets
 
 
 def document(found: "Allocation") -> dict[str, Any]:

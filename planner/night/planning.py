@@ -164,10 +164,7 @@ def book_sequence(
     order_s = length_of(planned.order)
     window_s = order_s * ROOM + SHORT_ROOM_S if hours is None else hours * 3600.0
     if order_s > window_s:
-        raise PlanImpossible(
-            f"the order takes {order_s / 3600:.2f} h, the night has {window_s / 3600:.2f} h: give it more hours, "
-            "lower the repeats in the sequence file, or give shares (--share) that it is to be cut to"
-        )
+        raise PlanImpossible(_too_long(planned, order_s, window_s))
     given = shares or [float(time / order_s) for time in _rig_s(planned.order, len(planned.parts))]
     new = NewNight(
         name=name or free_name(book, "+".join(Path(file).stem for file in files), now_us),
@@ -193,6 +190,18 @@ def book_sequence(
     )
     night = book.book_night(new, now_us=now_us, who=who)
     return Booked(night=night, order_s=order_s, notes=planned.notes, approval=rig.approval)
+
+
+def _too_long(planned: Planned, order_s: float, window_s: float) -> str:
+    said = f"the order takes {order_s / 3600:.2f} h, the night has {window_s / 3600:.2f} h: "
+    if len(planned.parts) > 1:
+        return said + "give it more hours, or shares (--share) that the requests are cut to"
+    repeats = planned.parts[0].sequence.fringe.repeats
+    fit = int(repeats * window_s / order_s)
+    if fit >= 1:
+        return said + f"fringe.repeats = {fit} instead of {repeats} would fit, or {order_s / 3600:.1f} h"
+    hours = order_s / repeats / 3600
+    return said + f"even one repeat takes {hours:.2f} h; give it that, or fewer values in the sweeps"
 
 
 def _documents(compiled: Compiled) -> Iterator[Mapping[str, Any]]:

@@ -186,27 +186,45 @@ def _durations(timelines: TimelineSet, timeline: IntArray) -> FloatArray:
 
 
 def _table(sequence: Sequence, timelines: TimelineSet, template: _Template, code: IntArray) -> ShotTable:
-    cells, size, repeats = template.cells, template.per_packet, sequence.fringe.repeats
+    cells, size = template.cells, template.per_packet
+    packets = _packets_of_cells(sequence, cells)
+    alike = packets.min() == packets.max()
 
     def spread(column: "NDArray[Number]") -> "NDArray[Number]":
         """A template column for all repeats: packet after packet, the repeats of a cell together."""
-        packets = column.reshape(cells, 1, size)
-        return np.broadcast_to(packets, (cells, repeats, size)).reshape(-1)
+        by_cell = column.reshape(cells, 1, size)
+        if alike:
+            return np.broadcast_to(by_cell, (cells, int(packets[0]), size)).reshape(-1)
+        return np.repeat(by_cell[:, 0], packets, axis=0).reshape(-1)
 
     settings = {name: spread(column) for name, column in template.settings.items()}
     timeline = spread(code)
-    packet = np.repeat(np.arange(cells * repeats), size)
+    count = int(packets.sum())
+    cell = np.repeat(np.arange(cells), packets)
+    first = np.cumsum(packets) - packets
     return ShotTable(
         settings=settings,
         switches={name: spread(column) for name, column in template.switches.items()},
         hold_s=settings[sequence.roles["hold"]],
         phase_rad=settings[sequence.roles["readout"]],
         duration_s=_durations(timelines, timeline),
-        cell=packet // repeats,
-        packet=packet,
-        repeat=packet % repeats,
+        cell=np.repeat(cell, size),
+        packet=np.repeat(np.arange(count), size),
+        repeat=np.repeat(np.arange(count) - first[cell], size),
         timeline=timeline,
     )
+
+
+def _packets_of_cells(sequence: Sequence, cells: int) -> IntArray:
+    """How many packets each cell gets, (n_cell,)."""
+    slow = 2 ** sum(switch.slow for switch in sequence.switches.values())
+    point, inner = np.arange(cells) // slow, 1
+    packets = np.full(cells, sequence.fringe.repeats, dtype=np.int64)
+    for sweep in reversed(sequence.sweeps):
+        if sweep.packets:
+            packets *= np.array(sweep.packets)[(point // inner) % len(sweep)]
+        inner *= len(sweep)
+    return packets
 
 
 def _check_table(sequence: Sequence, timelines: TimelineSet, check: Check, number: int, timeline: int) -> ShotTable:

@@ -91,6 +91,8 @@ SEQUENCE: dict[str, dict[str, Key]] = {
         "step": Key("distance between values, in place of count"),
         "spacing": Key('"linear" (default) or "log"'),
         "with": Key("moves together with that other sweep instead of being crossed with it"),
+        "offset": Key('budget: how far the setting stands from where its effect vanishes: "2 +- 0.5 urad"'),
+        "packets": Key("packets of each value, listed, each fringe.repeats times: more where it counts"),
     },
     "fringe": {
         "phases": must("readout phases of one packet, in the readout's unit"),

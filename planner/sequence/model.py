@@ -87,6 +87,9 @@ class Sweep:
     """The values one or several settings take together; sweeps of a sequence are crossed with each other."""
 
     values: Mapping[str, tuple[float, ...]]  # setting -> values, all of one length
+    packets: tuple[int, ...] = ()  # for each value, how many times fringe.repeats packets; () for once each
+    # how far a setting stands from where its effect vanishes, and one standard deviation of that
+    offsets: Mapping[str, tuple[float, float]] = field(default_factory=dict)
 
     def __len__(self) -> int:
         return len(next(iter(self.values.values())))

@@ -242,7 +242,7 @@ def _too_many(
     """Refuse a plan of too many shots by its counts alone: nothing of that size is built."""
     shots = 2 ** len(switches) * (len(fringe.phases_rad) * fringe.repeats if fringe else 1)
     for sweep in sweeps:
-        shots *= len(sweep)
+        shots *= sum(sweep.packets) or len(sweep)
     if shots > MOST_SHOTS:
         document.problem(
             ("fringe", "repeats"),

@@ -1,9 +1,11 @@
 """The `sweeps` and the readout phases of a sequence file."""
 
+from dataclasses import replace
 from math import pi
 from typing import Any
 
 from planner.quantities import unit
+from planner.sequence.beliefs import read_belief
 from planner.sequence.model import Setting, Sweep
 from planner.sequence.nodes import Fields, Node, show
 
@@ -28,6 +30,8 @@ def read_sweeps(node: Node | None, settings: dict[str, Setting], roles: dict[str
         node.problem(f"at most {MOST_SWEEPS} sweeps; found {len(named)}")
         return ()
     columns: dict[str, tuple[float, ...]] = {}
+    counts: dict[str, tuple[int, ...]] = {}
+    offsets: dict[str, tuple[float, float]] = {}
     leaders: dict[str, Node] = {}
     for name, child in named.items():
         if name not in settings:
@@ -39,16 +43,46 @@ def read_sweeps(node: Node | None, settings: dict[str, Setting], roles: dict[str
         values, leader = _sweep(child, settings[name])
         if leader is not None:
             leaders[name] = leader
+        listed = _packets(child, values, leader)
+        if listed:
+            counts[name] = listed
         if values is not None:
             columns[name] = values
+        offset = None if isinstance(child.value, list) else child.fields("sweeps.<setting>").get("offset")
+        stands = read_belief(offset, settings[name].unit) if offset else None
+        if stands is not None:
+            offsets[name] = stands
         if sum(map(len, columns.values())) > MOST_VALUES:  # stop before more is built
             child.problem(f"the sweeps have more than {MOST_VALUES:,} values together")
             return ()
-    return _joined(columns, leaders, named)
+    return tuple(
+        replace(sweep, offsets={name: offsets[name] for name in sweep.values if name in offsets})
+        for sweep in _joined(columns, counts, leaders, named)
+    )
+
+
+def _packets(node: Node, values: tuple[float, ...] | None, leader: Node | None) -> tuple[int, ...]:
+    """Packets of each value, as listed; () where none are or after a problem."""
+    if isinstance(node.value, list) or values is None:
+        return ()
+    listed = node.fields("sweeps.<setting>").get("packets")
+    if not listed:
+        return ()
+    if leader is not None:
+        listed.problem("a sweep that moves with another has that one's packets", "list them at the other sweep")
+        return ()
+    found = [child.whole(1, MOST_VALUES) for child in listed.items("packets", MOST_VALUES)]
+    if len(found) != len(values):
+        listed.problem(f"{len(values)} values and {len(found)} numbers of packets: one for each value is needed")
+        return ()
+    return tuple(count for count in found if count is not None) if None not in found else ()
 
 
 def _joined(
-    columns: dict[str, tuple[float, ...]], leaders: dict[str, Node], named: dict[str, Node]
+    columns: dict[str, tuple[float, ...]],
+    counts: dict[str, tuple[int, ...]],
+    leaders: dict[str, Node],
+    named: dict[str, Node],
 ) -> tuple[Sweep, ...]:
     groups = {name: {name: values} for name, values in columns.items() if name not in leaders}
     for name, node in leaders.items():
@@ -64,7 +98,7 @@ def _joined(
         groups[leader][name] = columns[name]
     for name, values in groups.items():
         _refuse_twins(named[name], list(zip(*values.values(), strict=True)))
-    return tuple(Sweep(values=values) for values in groups.values())
+    return tuple(Sweep(values=values, packets=counts.get(name, ())) for name, values in groups.items())
 
 
 def _refuse_twins(node: Node, points: list[tuple[float, ...]]) -> None:

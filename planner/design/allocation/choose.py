@@ -210,8 +210,9 @@ def wander_of(sequence: Sequence, known: Knowledge, hold_s: float) -> Wander:
 def _budget(known: Knowledge, scale: Scale, sequence: Sequence, hours: float, *, robust: bool) -> Allocation:
     """Signal beside one check for each swept setting other than hold and readout.
 
-    The offset that the slope is to bridge is taken as the largest distance of the swept values from rest: a sweep says
-    how far the setting may stand from where its effect vanishes. The slope is measured between the sweep's ends.
+    The offset that the slope is to bridge is what the sweep says under `offset`; without it, the largest distance of
+    the swept values from rest. The slope is measured between the sweep's ends. As nothing is known of it before it is
+    measured, what the offset's own uncertainty adds to the total is left out.
     """
     hold = best_hold(known, scale, robust=robust)
     rate = float(signal_variance_rate(known, scale, np.array([hold]))[0])
@@ -223,12 +224,13 @@ def _budget(known: Knowledge, scale: Scale, sequence: Sequence, hours: float, *,
             if name in skip or span <= 0.0:
                 continue
             rest = sequence.settings[name].rest
+            stands, unsure = sweep.offsets.get(name, (max(abs(rest - min(values)), abs(rest - max(values))), 0.0))
             # between two ends, half of the time each, a slope has four times the variance over the span squared
             checks.append(
                 Check(
                     name=name,
-                    offset=max(abs(rest - min(values)), abs(rest - max(values))),
-                    offset_error=0.0,
+                    offset=stands,
+                    offset_error=unsure,
                     slope_variance_s=4 * rate / span**2,
                     slope=0.0,
                     packet_s=8 * (hold + known.dead_s),
