@@ -78,6 +78,7 @@ def command(
         if stopped:
             return stopped
         data = NightData.from_columns(book.night_columns(row.id))
+        titles = [request.title for request in book.requests(row.id)]
     results = summarise(data)
     pictures = results_command.draw(
         results, row.name, str(folder / "contrast-against-hold.png"), str(folder / "fringes.png")
@@ -86,7 +87,7 @@ def command(
         click.echo(json.dumps({"night": row.name, **results_command.document(results), "pictures": pictures}))
         return 0
     console = Console(highlight=False)
-    results_command.show(results, row.name, console)
+    results_command.show(results, row.name, console, titles)
     for picture in pictures:
         console.print(f"picture: {picture}", markup=False, soft_wrap=True)
     console.print(f"logbook: {place} (nightfringe results --logbook {place})", markup=False, soft_wrap=True)

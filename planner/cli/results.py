@@ -6,6 +6,8 @@ from typing import TYPE_CHECKING, Any
 import click
 
 if TYPE_CHECKING:
+    from collections.abc import Sequence
+
     from rich.console import Console
 
     from planner.analysis.decay import Decay
@@ -52,6 +54,7 @@ def command(
     with open_logbook(logbook or default_place()) as book:
         row = book.night(night)
         data = NightData.from_columns(book.night_columns(row.id))
+        titles = [request.title for request in book.requests(row.id)]
     results = summarise(data, cut_flags=cut_flags, shape=SHAPES.get(shape))
     drawn = draw(results, row.name, picture, fringe_picture)
     if as_json:
@@ -60,7 +63,7 @@ def command(
     from rich.console import Console
 
     console = Console(highlight=False)
-    show(results, row.name, console)
+    show(results, row.name, console, titles)
     for place in drawn:
         console.print(f"picture: {place}", markup=False, soft_wrap=True)
 
@@ -84,8 +87,11 @@ def draw(results: "NightResults", name: str, picture: str | None, fringe_picture
     return drawn
 
 
-def show(results: "NightResults", name: str, console: "Console") -> None:
-    """Print the results: numbers first, then a small picture, then what they mean. Fits 80 columns."""
+def show(results: "NightResults", name: str, console: "Console", titles: "Sequence[str]" = ()) -> None:
+    """Print the results: numbers first, then a small picture, then what they mean. Fits 80 columns.
+
+    titles: of the night's requests.
+    """
     from rich.text import Text
 
     from planner.plots.decay import label
@@ -96,6 +102,8 @@ def show(results: "NightResults", name: str, console: "Console") -> None:
         console.print(Text(f"  left out: {count:,} {reason}"))
     for curve in results.curves:
         head = label(curve, len(results.curves) > 1)
+        if len(titles) > 1:
+            head = ": ".join(filter(None, [titles[curve.request], "" if head.startswith("request ") else head]))
         console.print(Text(f"\n{head}" if head else ""), style="bold")
         for line in headline(curve):
             console.print(Text(line))
